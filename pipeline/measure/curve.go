@@ -30,8 +30,8 @@ func (in *Input) curve(r *Report) {
 	if math.IsNaN(width) {
 		width = c.Edges[c.T] - c.Edges[0]
 	}
-	r.set("peak_time", p.Peak, width/fwhmPerSigma/math.Sqrt(n), "ps", "vertex of a local parabola"+countingOnly)
-	r.set("peak_light", p.Height, unknown, "photoelectrons/ps", "vertex of a local parabola")
+	r.set("peak_time", p.Peak, width/fwhmPerSigma/math.Sqrt(n), "ps", "vertex of a parabola through the logarithm"+countingOnly)
+	r.set("peak_light", p.Height, unknown, "photoelectrons/ps", "vertex of a parabola through the logarithm")
 	r.set("fwhm", p.Width, p.Width/math.Sqrt(2*n), "ps", "half-height crossings, linear interpolation"+countingOnly)
 	r.set("rise_10_90", p.Rise, p.Rise/math.Sqrt(2*n), "ps", "10 % to 90 % crossings before the peak"+countingOnly)
 	if math.IsNaN(p.Width) {
@@ -73,10 +73,11 @@ func Shape(t, v []float64) Pulse {
 	return p
 }
 
-// vertex fits a parabola by least squares to the samples around top that stay
-// above 70 % of it (at least one neighbour on either side, at most five), and
-// returns the time and height of its maximum. ok is false at the border of the
-// curve or where the fit has no maximum inside its samples.
+// vertex fits a parabola by least squares to the logarithm of the samples
+// around top that stay above 70 % of it (at least one neighbour on either side,
+// at most five), and returns the time and height of its maximum: exact for a
+// Gaussian. ok is false at the border of the curve, where a sample is not
+// positive or where the fit has no maximum inside its samples.
 func vertex(t, v []float64, top int) (tp, h float64, ok bool) {
 	const share, reach = 0.7, 5
 	lo, hi := top-1, top+1
@@ -91,15 +92,19 @@ func vertex(t, v []float64, top int) (tp, h float64, ok bool) {
 	}
 	half := min(top-lo, hi-top) // symmetric, so that a tail does not pull the vertex
 	lo, hi = top-half, top+half
-	a, b, c := parabola(t[lo:hi+1], v[lo:hi+1], t[top])
-	if !(c < 0) {
+	ln := make([]float64, hi+1-lo)
+	for j := range ln {
+		ln[j] = math.Log(v[lo+j]) // -Inf or NaN fails the test below
+	}
+	a, b, c := parabola(t[lo:hi+1], ln, t[top])
+	if !(c < 0) || math.IsInf(c, 0) {
 		return 0, 0, false
 	}
 	d := -b / (2 * c)
 	if t[top]+d < t[lo] || t[top]+d > t[hi] {
 		return 0, 0, false
 	}
-	return t[top] + d, a + b*d/2, true
+	return t[top] + d, math.Exp(a + b*d/2), true
 }
 
 // parabola fits v = a + b·(t−t0) + c·(t−t0)² by least squares.

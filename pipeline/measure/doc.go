@@ -8,8 +8,8 @@
 //
 //	p_k = L_k / d_k            photoelectrons per ps, at the frame centre t_k   (1)
 //
-// Peak time and height come from a parabola fitted to the samples around the
-// largest one (the vertex of a local quadratic). The full width at half
+// Peak time and height come from a parabola fitted to the logarithm of the
+// samples around the largest one, which is exact for a Gaussian. The full width at half
 // maximum is the distance between the two half-height crossings nearest to the
 // peak, the rise time that between the 10 % and the 90 % crossing before it;
 // crossings are interpolated linearly. For a Gaussian pulse of standard
