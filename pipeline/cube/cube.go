@@ -30,7 +30,18 @@ type Cube struct {
 	// Scale is the length in the scene that one window pixel sees, in
 	// micrometres; 0 means unknown.
 	Scale float64
+
+	// Bin is the number of window pixels along x and y that one cube pixel
+	// covers; 0 means 1.
+	Bin int
 }
+
+// Pitch returns the window pixels per cube pixel, at least 1.
+func (c *Cube) Pitch() float64 { return float64(max(1, c.Bin)) }
+
+// Position returns the window position, in window pixels, of cube column or
+// row j: the centre of the pixels it covers.
+func (c *Cube) Position(j int) float64 { return (float64(j)+0.5)*c.Pitch() - 0.5 }
 
 // New makes a cube of zeros. It panics if a side is not positive.
 func New(t, h, w int) *Cube {

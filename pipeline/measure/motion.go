@@ -73,11 +73,12 @@ func track(c *cube.Cube, transmission float64) *Track {
 			continue
 		}
 		n := p.light * transmission
+		u := c.Pitch()
 		tr.Time = append(tr.Time, c.Time[k])
-		tr.X = append(tr.X, p.x)
-		tr.Y = append(tr.Y, p.y)
-		tr.SigmaX = append(tr.SigmaX, p.dx/math.Sqrt(n))
-		tr.SigmaY = append(tr.SigmaY, p.dy/math.Sqrt(n))
+		tr.X = append(tr.X, (p.x+0.5)*u-0.5)
+		tr.Y = append(tr.Y, (p.y+0.5)*u-0.5)
+		tr.SigmaX = append(tr.SigmaX, u*p.dx/math.Sqrt(n))
+		tr.SigmaY = append(tr.SigmaY, u*p.dy/math.Sqrt(n))
 		tr.Light = append(tr.Light, p.light)
 	}
 	return tr
