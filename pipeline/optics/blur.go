@@ -1,0 +1,133 @@
+package optics
+
+import "math"
+
+// Blur is a Gaussian point spread, continuous, in pixels of the plane it acts
+// on.
+type Blur struct {
+	SigmaX, SigmaY float64 // px, 0 for none
+}
+
+// kernelTail is the mass that may be cut from either side of a kernel: far
+// under the calibrated model-error floor of a percent.
+const kernelTail = 1e-4
+
+// kernel is a sampled point spread: dst[r] = Σ_j w[j]·src[r−lo−j].
+type kernel struct {
+	lo int
+	w  []float32
+}
+
+// normal integrals: the n-th antiderivative of the Gaussian density of
+// standard deviation s, vanishing at −∞. Differences of them are box
+// convolutions of g_s.
+func normal2(x, s float64) float64 {
+	if s == 0 {
+		return max(x, 0)
+	}
+	return x*cdf(x/s) + s*pdf(x/s)
+}
+
+func normal3(x, s float64) float64 {
+	if s == 0 {
+		return max(x, 0) * max(x, 0) / 2
+	}
+	return (x*x+s*s)/2*cdf(x/s) + s*x/2*pdf(x/s)
+}
+
+func cdf(x float64) float64 { return math.Erfc(-x/math.Sqrt2) / 2 }
+func pdf(x float64) float64 { return math.Exp(-x*x/2) / math.Sqrt(2*math.Pi) }
+
+// spread evaluates (3), or (4) for a smear of length l > 0, at x.
+func spread(x, sigma, l float64) float64 {
+	if l == 0 {
+		return normal2(x+1, sigma) - 2*normal2(x, sigma) + normal2(x-1, sigma)
+	}
+	third := func(x float64) float64 {
+		return normal3(x+1, sigma) - 2*normal3(x, sigma) + normal3(x-1, sigma)
+	}
+	return (third(x+l/2) - third(x-l/2)) / l
+}
+
+// newKernel samples (3) or (4), displaced by shift pixels, and cuts and
+// normalises it.
+func newKernel(sigma, smear, shift float64) kernel {
+	reach := int(math.Ceil(6*sigma+smear/2+math.Abs(shift))) + 2
+	w := make([]float64, 2*reach+1)
+	var sum float64
+	for j := range w {
+		w[j] = max(spread(float64(j-reach)-shift, sigma, smear), 0)
+		sum += w[j]
+	}
+	lo, hi := 0, len(w)
+	for cut := 0.0; cut+w[lo] < kernelTail*sum; lo++ {
+		cut += w[lo]
+	}
+	for cut := 0.0; cut+w[hi-1] < kernelTail*sum; hi-- {
+		cut += w[hi-1]
+	}
+	w = w[lo:hi]
+	sum = 0
+	for _, v := range w {
+		sum += v
+	}
+	k := kernel{lo: lo - reach, w: make([]float32, len(w))}
+	for j, v := range w {
+		k.w[j] = float32(v / sum)
+	}
+	return k
+}
+
+// flip returns the kernel of the adjoint.
+func (k kernel) flip() kernel {
+	n := len(k.w)
+	f := kernel{lo: -(k.lo + n - 1), w: make([]float32, n)}
+	for j, v := range k.w {
+		f.w[n-1-j] = v
+	}
+	return f
+}
+
+// identity reports whether the kernel changes nothing.
+func (k kernel) identity() bool { return len(k.w) == 1 && k.lo == 0 && k.w[0] == 1 }
+
+// blur convolves the rows×cols plane src with kx along rows and ky along
+// columns into dst, zeros outside. dst, tmp and src must not overlap.
+func blur(dst, tmp, src []float32, rows, cols int, kx, ky kernel) {
+	if kx.identity() {
+		tmp = src
+	} else {
+		for r := range rows {
+			convolveRow(tmp[r*cols:(r+1)*cols], src[r*cols:(r+1)*cols], kx)
+		}
+	}
+	for r := range rows {
+		out := dst[r*cols : (r+1)*cols]
+		clear(out)
+		for j, w := range ky.w {
+			if q := r - ky.lo - j; q >= 0 && q < rows {
+				axpy(out, w, tmp[q*cols:(q+1)*cols])
+			}
+		}
+	}
+}
+
+func convolveRow(dst, src []float32, k kernel) {
+	clear(dst)
+	n := len(dst)
+	for j, w := range k.w {
+		off := k.lo + j
+		a, b := max(off, 0), min(n, n+off)
+		if a < b {
+			axpy(dst[a:b], w, src[a-off:b-off])
+		}
+	}
+}
+
+// axpy is dst[i] += w·src[i].
+func axpy(dst []float32, w float32, src []float32) {
+	src = src[:len(dst)]
+	for i, v := range src {
+		dst[i] += float32(w * v)
+	}
+}

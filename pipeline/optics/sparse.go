@@ -1,0 +1,88 @@
+package optics
+
+// mul writes dst = S·src; dst has one entry per row.
+func (s *sparse) mul(dst, src []float32) {
+	for r := range dst {
+		a, b := s.start[r], s.start[r+1]
+		col, val := s.col[a:b], s.val[a:b]
+		val = val[:len(col)]
+		var sum float32
+		for j, c := range col {
+			sum += float32(val[j] * src[c])
+		}
+		dst[r] = sum
+	}
+}
+
+// transpose returns the transposed matrix; cols is the number of columns of
+// s. Entries of a row are ordered by column, so results do not depend on how
+// s was filled.
+func (s *sparse) transpose(cols int) sparse {
+	t := sparse{start: make([]int32, cols+1), col: make([]int32, len(s.col)), val: make([]float32, len(s.val))}
+	for _, c := range s.col {
+		t.start[c+1]++
+	}
+	for c := range cols {
+		t.start[c+1] += t.start[c]
+	}
+	next := append([]int32(nil), t.start[:cols]...)
+	for r := range len(s.start) - 1 {
+		for j := s.start[r]; j < s.start[r+1]; j++ {
+			k := next[s.col[j]]
+			next[s.col[j]]++
+			t.col[k], t.val[k] = int32(r), s.val[j]
+		}
+	}
+	return t
+}
+
+// abs returns the matrix of absolute values.
+func (s *sparse) abs() sparse {
+	v := make([]float32, len(s.val))
+	for j, x := range s.val {
+		v[j] = max(x, -x)
+	}
+	return sparse{start: s.start, col: s.col, val: v}
+}
+
+// Apply writes the view of the window plane src (H·W) to dst (Rect.H·Rect.W).
+// dst and src must not overlap. It panics if a length does not fit.
+func (v *View) Apply(dst, src []float32) {
+	if len(dst) != v.Rect.W*v.Rect.H || len(src) != v.w*v.h {
+		panic(ErrShape)
+	}
+	v.fwd.mul(dst, src)
+}
+
+// Adjoint writes the transposed operator of the reference plane src to the
+// window plane dst.
+func (v *View) Adjoint(dst, src []float32) {
+	if len(src) != v.Rect.W*v.Rect.H || len(dst) != v.w*v.h {
+		panic(ErrShape)
+	}
+	v.adj.mul(dst, src)
+}
+
+// Coverage returns, for every pixel of the rectangle, how much of its
+// interpolation falls inside the window: 1 inside, 0 for a pixel that sees
+// nothing of the window. Where it is under 1, light of the scene outside the
+// window may reach the pixel and is not modelled.
+func (v *View) Coverage() []float32 {
+	inv, err := invert(v.hom)
+	if err != nil {
+		panic(err) // NewView has checked it
+	}
+	det := inv[0]*(inv[4]*inv[8]-inv[5]*inv[7]) - inv[1]*(inv[3]*inv[8]-inv[5]*inv[6]) + inv[2]*(inv[3]*inv[7]-inv[4]*inv[6])
+	ones := make([]float32, v.w*v.h)
+	for j := range ones {
+		ones[j] = 1
+	}
+	dst := make([]float32, v.Rect.W*v.Rect.H)
+	v.fwd.mul(dst, ones)
+	for j := range dst {
+		_, _, d := project(inv, float64(v.Rect.X+j%v.Rect.W), float64(v.Rect.Y+j/v.Rect.W))
+		jac := det / (d * d * d)
+		dst[j] = float32(float64(dst[j]) / max(jac, -jac))
+	}
+	return dst
+}

@@ -1,0 +1,53 @@
+package optics
+
+// ColumnSums writes, for every voxel, the sum over all pixels of the absolute
+// entries of the operator times the pixel weights wS (streak plane) and wR
+// (reference plane), both not negative.
+func (m *Model) ColumnSums(dst, wS, wR []float32) {
+	m.checkSizes(wS, wR, dst)
+	plane := make([]float32, len(wS))
+	back := make([]float32, m.g.H*m.g.W)
+	m.BlurStreakAdjoint(plane, make([]float32, len(wS)), wS)
+	m.UnprojectAbs(back, wR)
+	m.unshear(dst, plane, back)
+}
+
+// UnprojectAbs is Unproject with the absolute values of the entries. It
+// allocates.
+func (m *Model) UnprojectAbs(dst, src []float32) {
+	n := len(src)
+	tmp := make([]float32, 2*n)
+	blur(tmp[:n], tmp[n:], src, m.g.View.Rect.H, m.g.View.Rect.W, m.rx, m.ry)
+	a := m.g.View.adj.abs()
+	a.mul(dst, tmp[:n])
+	scale(dst, float32(m.g.Ratio))
+}
+
+// RowSums writes, for every pixel of both planes, the sum over all voxels of
+// the absolute entries of the operator: the model's answer to a cube of ones
+// if the view had no negative lobes.
+func (m *Model) RowSums(rS, rR []float32) {
+	g := &m.g
+	if len(rS) != m.rows*m.cols || len(rR) != g.View.Rect.W*g.View.Rect.H {
+		panic(ErrShape)
+	}
+	plane := make([]float32, len(rS))
+	for k := range g.T {
+		for y := range g.H {
+			out := plane[(y+k*g.Step+g.StreakPad)*m.cols+g.StreakPad:][:g.W]
+			for i, c := range g.Code[y*g.W:][:g.W] {
+				out[i] += c
+			}
+		}
+	}
+	m.BlurStreak(rS, make([]float32, len(rS)), plane)
+	depth := make([]float32, g.H*g.W)
+	for j := range depth {
+		depth[j] = float32(g.T)
+	}
+	tmp := make([]float32, 2*len(rR))
+	a := g.View.fwd.abs()
+	a.mul(tmp[:len(rR)], depth)
+	blur(rR, tmp[len(rR):], tmp[:len(rR)], g.View.Rect.H, g.View.Rect.W, m.rx, m.ry)
+	scale(rR, float32(g.Ratio))
+}
