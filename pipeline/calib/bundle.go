@@ -63,7 +63,7 @@ type Bundle struct {
 	ID        string // sha256 over the contents, set by Save and Load
 	Direction string // sweep.direction of the raw streak frames
 
-	Created, ValidFrom, ValidUntil time.Time // ValidUntil zero: open end
+	Created, ValidFrom, ValidUntil time.Time // ValidFrom, ValidUntil zero: no limit
 
 	Streak, Reference Arm
 
