@@ -1,0 +1,313 @@
+package solve
+
+import (
+	"math"
+
+	"unsheard/pipeline/optics"
+)
+
+// engine holds the state of the primal-dual loop. Its bands are worked in
+// parallel; everything a result depends on is fixed by the shape, so the
+// number of workers changes no bit.
+//
+// An iteration has two parallel parts with a barrier after each:
+//
+//  1. every band sweeps its planes: primal step of plane k, dual step of
+//     plane k−1, streak and reference sums;
+//  2. the dual rows between bands; the data dual of each arm.
+//
+// Part 1 reads duals of the row above its band; those are written in part 2
+// only, from copies of the extrapolated rows on both sides of the edge.
+type engine struct {
+	m             *optics.Model
+	t, h, w, step int
+	pad, cols     int
+	bands         []*band
+	tau           []float32
+	s, r          arm
+	castS         []float32 // B_sᵀ y_s on the padded plane
+	backR         []float32 // (a·B_r V)ᵀ y_r on the window
+	zero          []float32
+	alpha, sigma  float32
+	lambda        float32
+	workers       int
+}
+
+// band is a range of rows y0 ≤ y < y1 of the cube, stored plane after plane.
+type band struct {
+	y0, y1      int
+	x, p, q, r  []float32 // t·rows·w
+	ring        [2][]float32
+	streak      []float32 // (rows + (t−1)·step)·w
+	sum         []float32 // rows·w
+	top, bottom []float32 // extrapolated first and last rows, t·w
+	dx, total   float64
+}
+
+// arm is one arm's data and dual, in data units: photoelectrons for the
+// planes and their inverse for the dual.
+type arm struct {
+	data, vari []float32 // vari ≤ 0: masked, and data is 0
+	dual       []float32
+	sigma, inv []float32 // dual step and 1/(1 + σ·vari); both 0 where masked
+	rowSum     []float32
+	bar, now   []float32 // model at the extrapolated and the current cube
+	tmp, plane []float32
+	used       int
+	chi2       float64
+}
+
+// bandRows is the height of a band: small enough for a few cores at 64 rows,
+// large enough that the work at the edges does not show. It depends on the
+// shape alone, since streak sums are grouped by it.
+func bandRows(h int) int {
+	if h <= 128 {
+		return 16
+	}
+	return 32
+}
+
+func newEngine(m *optics.Model, workers int) *engine {
+	g := m.Geometry()
+	rows, cols := m.StreakShape()
+	rr, rc := m.ReferenceShape()
+	e := &engine{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers}
+	e.tau = make([]float32, e.h*e.w)
+	e.castS = make([]float32, rows*cols)
+	e.backR = make([]float32, e.h*e.w)
+	e.zero = make([]float32, e.w)
+	e.s, e.r = newArm(rows*cols), newArm(rr*rc)
+	e.r.plane = make([]float32, e.h*e.w)
+	e.r.tmp = make([]float32, 2*rr*rc)
+	m.RowSums(e.s.rowSum, e.r.rowSum)
+	size := bandRows(e.h)
+	for y := 0; y < e.h; y += size {
+		e.bands = append(e.bands, e.newBand(y, min(y+size, e.h)))
+	}
+	return e
+}
+
+func newArm(n int) arm {
+	f := func() []float32 { return make([]float32, n) }
+	return arm{data: f(), vari: f(), dual: f(), sigma: f(), inv: f(), rowSum: f(), bar: f(), now: f(), tmp: f(), plane: f()}
+}
+
+func (e *engine) newBand(y0, y1 int) *band {
+	n := (y1 - y0) * e.w
+	b := &band{y0: y0, y1: y1, streak: make([]float32, (y1-y0+(e.t-1)*e.step)*e.w), sum: make([]float32, n)}
+	for _, v := range []*[]float32{&b.x, &b.p, &b.q, &b.r} {
+		*v = make([]float32, e.t*n)
+	}
+	b.ring = [2][]float32{make([]float32, n), make([]float32, n)}
+	b.top, b.bottom = make([]float32, e.t*e.w), make([]float32, e.t*e.w)
+	return b
+}
+
+// load sets the cube; nil is 0. Negative and non-finite values become 0.
+func (e *engine) load(x []float32) {
+	for _, b := range e.bands {
+		n := (b.y1 - b.y0) * e.w
+		for k := range e.t {
+			dst := b.x[k*n : (k+1)*n]
+			if x == nil {
+				clear(dst)
+				continue
+			}
+			copy(dst, x[(k*e.h+b.y0)*e.w:])
+			for j, v := range dst {
+				if !(v > tiny) || v > math.MaxFloat32 {
+					dst[j] = 0
+				}
+			}
+		}
+	}
+	e.refresh()
+}
+
+// store copies the cube out.
+func (e *engine) store(x []float32) {
+	for _, b := range e.bands {
+		n := (b.y1 - b.y0) * e.w
+		for k := range e.t {
+			copy(x[(k*e.h+b.y0)*e.w:][:n], b.x[k*n:(k+1)*n])
+		}
+	}
+}
+
+// refresh sets the model's answer to the current cube.
+func (e *engine) refresh() {
+	x := make([]float32, e.t*e.h*e.w)
+	e.store(x)
+	e.m.Forward(e.s.now, e.r.now, x)
+}
+
+// set writes an arm's data and variance.
+func (a *arm) set(data, vari []float32) {
+	a.used = 0
+	for j := range a.data {
+		d, v := float64(data[j]), float64(vari[j])
+		a.data[j], a.vari[j] = 0, -1
+		if v > 0 && v <= math.MaxFloat32 && !math.IsNaN(d) && !math.IsInf(d, 0) {
+			a.data[j], a.vari[j] = data[j], vari[j]
+			a.used++
+		} else {
+			a.dual[j] = 0
+		}
+	}
+}
+
+// steps sets the step sizes of Pock & Chambolle 2011, lemma 2 with α = 1, for
+// the operator in data units: τ_j = γ/Σ_i|K_ij| and σ_i = 1/(γ·Σ_j|K_ij|). In
+// those units the columns of the streak arm sum to at most C whatever the
+// weights are, so that τ needs one value per window pixel. γ turns dual
+// units (1/photoelectron) into primal ones.
+func (e *engine) steps(gamma, lambda, alpha float64) {
+	ones := func(a *arm) []float32 {
+		for j, v := range a.vari {
+			a.tmp[j] = 0
+			if v > 0 {
+				a.tmp[j] = 1
+			}
+		}
+		return a.tmp[:len(a.vari)]
+	}
+	refSum := make([]float32, e.h*e.w)
+	e.m.UnprojectAbs(refSum, ones(&e.r))
+	code := e.m.Geometry().Code
+	for j := range e.tau {
+		sum := float64(code[j]) + float64(refSum[j]) + 4 + 2*alpha
+		e.tau[j] = float32(gamma / (sum * stepMargin))
+	}
+	for _, a := range []*arm{&e.s, &e.r} {
+		for j, v := range a.vari {
+			a.sigma[j], a.inv[j] = 0, 0
+			if v > 0 {
+				s := 1 / (gamma * stepMargin * max(float64(a.rowSum[j]), leastRow))
+				a.sigma[j], a.inv[j] = float32(s), float32(1/(1+s*float64(v)))
+			}
+		}
+	}
+	e.alpha, e.lambda = float32(alpha), float32(lambda)
+	e.sigma = float32(1 / (gamma * stepMargin * 2 * max(1, alpha)))
+}
+
+const (
+	// stepMargin keeps τσ‖K‖² under 1 although sums and steps are rounded.
+	stepMargin = 1 + 1e-5
+	// leastRow bounds the dual step of a pixel that sees almost nothing of
+	// the cube. It is far under the sum of any pixel inside.
+	leastRow = 1e-2
+)
+
+// iterate is one iteration; with count it also returns Σ|x_new − x_old| and
+// Σ x_new.
+func (e *engine) iterate(count bool) (dx, total float64) {
+	e.each(len(e.bands), func(j int) { e.sweep(j, count) })
+	edges := len(e.bands) - 1
+	e.each(edges+2, func(j int) {
+		switch j {
+		case 0:
+			e.streakDual()
+		case 1:
+			e.referenceDual()
+		default:
+			e.edge(j - 2)
+		}
+	})
+	for _, b := range e.bands {
+		dx += b.dx
+		total += b.total
+	}
+	return dx, total
+}
+
+// sweep is part 1 for one band.
+func (e *engine) sweep(j int, count bool) {
+	b := e.bands[j]
+	rows := b.y1 - b.y0
+	n := rows * e.w
+	clear(b.streak)
+	clear(b.sum)
+	code := e.m.Geometry().Code
+	a := plane{rows: rows, w: e.w, tau: e.tau[b.y0*e.w:][:n], code: code[b.y0*e.w:][:n], back: e.backR[b.y0*e.w:][:n],
+		castStride: e.cols, sum: b.sum, alpha: e.alpha, sigma: e.sigma, lambda: e.lambda,
+		last: b.y1 == e.h, count: count, zero: e.zero, first: true}
+	for k := range e.t {
+		cut := func(v []float32) []float32 { return v[k*n : (k+1)*n] }
+		a.x, a.p, a.q, a.r = cut(b.x), cut(b.p), cut(b.q), cut(b.r)
+		a.up = e.zero
+		if j > 0 {
+			above := e.bands[j-1]
+			m := (above.y1 - above.y0) * e.w
+			a.up = above.q[(k+1)*m-e.w : (k+1)*m]
+		}
+		a.now, a.before = b.ring[k&1], b.ring[1-k&1]
+		a.cast = e.castS[(b.y0+k*e.step+e.pad)*e.cols+e.pad:]
+		a.streak = b.streak[k*e.step*e.w:][:n]
+		a.step()
+		copy(b.top[k*e.w:(k+1)*e.w], a.now[:e.w])
+		copy(b.bottom[k*e.w:(k+1)*e.w], a.now[n-e.w:])
+		a.pp, a.qq, a.rr, a.first = a.p, a.q, a.r, false
+	}
+	a.before = a.now
+	a.finish()
+	b.dx, b.total = a.dx, a.total
+}
+
+// edge steps the duals of the last row of band j, which is not the last band.
+func (e *engine) edge(j int) {
+	b, below := e.bands[j], e.bands[j+1]
+	n := (b.y1 - b.y0) * e.w
+	for k := range e.t {
+		lo, hi := (k+1)*n-e.w, (k+1)*n
+		row := func(v []float32, k int) []float32 { return v[k*e.w : (k+1)*e.w] }
+		dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], row(b.bottom, k), row(below.top, k), row(b.bottom, min(k+1, e.t-1)), e.alpha, e.sigma, e.lambda)
+	}
+}
+
+// streakDual gathers the bands' streak planes, blurs, steps the dual and
+// casts it back.
+func (e *engine) streakDual() {
+	a := &e.s
+	clear(a.plane)
+	for _, b := range e.bands {
+		for r := range len(b.streak) / e.w {
+			dst := a.plane[(b.y0+r+e.pad)*e.cols+e.pad:][:e.w]
+			for i, v := range b.streak[r*e.w : (r+1)*e.w] {
+				dst[i] += v
+			}
+		}
+	}
+	e.m.BlurStreak(a.bar, a.tmp, a.plane)
+	a.step()
+	e.m.BlurStreakAdjoint(e.castS, a.tmp, a.dual)
+}
+
+func (e *engine) referenceDual() {
+	a := &e.r
+	for _, b := range e.bands {
+		copy(a.plane[b.y0*e.w:], b.sum)
+	}
+	e.m.Project(a.bar, a.tmp, a.plane)
+	a.step()
+	e.m.Unproject(e.backR, a.tmp, a.dual)
+}
+
+// step is the proximal step of the convex conjugate of ½Σ(·−data)²/vari. The
+// model of the cube itself is the mean of its extrapolation and the one
+// before, since the operator is linear; rounding errors halve every time.
+func (a *arm) step() {
+	var chi float64
+	for j, v := range a.vari {
+		now := (a.bar[j] + a.now[j]) / 2
+		a.now[j] = now
+		if v <= 0 {
+			continue
+		}
+		d := float64(now - a.data[j])
+		chi += d * d / float64(v)
+		u := a.dual[j] + float32(a.sigma[j]*(a.bar[j]-a.data[j]))
+		a.dual[j] = flush(u * a.inv[j])
+	}
+	a.chi2 = chi
+}

@@ -1,0 +1,163 @@
+package solve
+
+import "math"
+
+// tiny is the value (photoelectrons for x, dual units for p, q, r) under
+// which numbers are set to 0: the primal step never leaves a positive x below
+// it, and the projection, which shrinks a dual by a constant factor for as
+// many iterations as its neighbours push outwards, never leaves a dual below
+// it. So no denormal number arises, which would cost a hundred cycles each.
+const tiny = 1e-18
+
+// plane is one call of the kernel: the primal step of plane k and the dual
+// step of plane k−1, for the rows of one band. All slices are rows·w long
+// unless said otherwise; rows lie one after the other.
+type plane struct {
+	rows, w int
+
+	x            []float32 // cube, plane k, read and written
+	p, q, r      []float32 // TV duals of plane k, read
+	pp, qq, rr   []float32 // TV duals of plane k−1; rr is read for plane k
+	up           []float32 // q of the row above the band, plane k (w)
+	now, before  []float32 // extrapolated planes k (written) and k−1 (read)
+	tau, code    []float32 // primal steps and code of the band
+	back         []float32 // back-projection of the reference dual
+	cast         []float32 // back-projection of the streak dual, from the band's first row in plane k
+	castStride   int       // its stride
+	streak       []float32 // streak plane of the band from its first row in plane k, added to
+	sum          []float32 // reference plane of the band, added to
+	alpha, sigma float32   // weight of ∂t; dual step
+	lambda       float32   // radius of the dual balls
+	first        bool      // k = 0: no plane k−1 to step
+	last         bool      // the band's last row is the cube's last row
+	dx, total    float64   // with count: Σ|x_new − x_old| and Σ x_new
+	count        bool
+	zero         []float32 // w zeros
+}
+
+// step is, for plane k and every row y and column i of the band,
+//
+//	g    = C·cast + back − (p−p[i−1]) − (q−q[y−1]) − α(r−r[k−1])
+//	xnew = max(0, x − τ·g);  now = 2·xnew − x;  x = xnew
+//	streak += C·now;  sum += now
+//
+// and then, for plane k−1 with b = before,
+//
+//	(p,q,r) += σ·(b[i+1]−b, b[y+1]−b, α·(now−b)), projected on |·| ≤ λ
+//
+// where a difference that would leave the cube is 0. The dual row at the lower
+// edge of a band that is not the last is left to edge.
+func (a *plane) step() {
+	w := a.w
+	for y := range a.rows {
+		lo, hi := y*w, (y+1)*w
+		qUp := a.up
+		if y > 0 {
+			qUp = a.q[lo-w : lo]
+		}
+		rBack := a.zero
+		if !a.first {
+			rBack = a.rr[lo:hi]
+		}
+		primal(a.x[lo:hi], a.now[lo:hi], a.tau[lo:hi], a.code[lo:hi], a.cast[y*a.castStride:][:w], a.back[lo:hi],
+			a.p[lo:hi], a.q[lo:hi], qUp, a.r[lo:hi], rBack, a.streak[lo:hi], a.sum[lo:hi], a.alpha)
+		if a.count {
+			d, s := change(a.now[lo:hi], a.x[lo:hi])
+			a.dx += d
+			a.total += s
+		}
+		if a.first {
+			continue
+		}
+		a.dualRow(y, a.now[lo:hi])
+	}
+}
+
+// finish is the dual step of the last plane, k−1 = T−1, where ∂t is 0.
+func (a *plane) finish() {
+	for y := range a.rows {
+		a.dualRow(y, a.before[y*a.w:(y+1)*a.w])
+	}
+}
+
+func (a *plane) dualRow(y int, next []float32) {
+	w := a.w
+	lo, hi := y*w, (y+1)*w
+	b := a.before[lo:hi]
+	down := b
+	if y+1 < a.rows {
+		down = a.before[hi : hi+w]
+	} else if !a.last {
+		return
+	}
+	dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.alpha, a.sigma, a.lambda)
+}
+
+// primal is the first half of step for one row. Products are rounded before
+// they are added, so that every machine gives the same bits.
+func primal(x, now, tau, code, cast, back, p, q, qUp, r, rBack, streak, sum []float32, alpha float32) {
+	n := len(x)
+	now, tau, code, cast, back = now[:n], tau[:n], code[:n], cast[:n], back[:n]
+	p, q, qUp, r, rBack = p[:n], q[:n], qUp[:n], r[:n], rBack[:n]
+	streak, sum = streak[:n], sum[:n]
+	var left float32
+	for i := range x {
+		c := code[i]
+		g := float32(c*cast[i]) + back[i]
+		g -= p[i] - left
+		left = p[i]
+		g -= q[i] - qUp[i]
+		g -= float32(alpha * (r[i] - rBack[i]))
+		old := x[i]
+		v := old - float32(tau[i]*g)
+		if !(v > tiny) {
+			v = 0
+		}
+		e := v + (v - old)
+		x[i], now[i] = v, e
+		streak[i] += float32(c * e)
+		sum[i] += e
+	}
+}
+
+// dual is the second half of step for one row.
+func dual(p, q, r, b, down, next []float32, alpha, sigma, lambda float32) {
+	n := len(b)
+	p, q, r, down, next = p[:n], q[:n], r[:n], down[:n], next[:n]
+	sigmaT := sigma * alpha
+	limit := lambda * lambda
+	for i := range b {
+		v := b[i]
+		right := v
+		if i+1 < n {
+			right = b[i+1]
+		}
+		u0 := p[i] + float32(sigma*(right-v))
+		u1 := q[i] + float32(sigma*(down[i]-v))
+		u2 := r[i] + float32(sigmaT*(next[i]-v))
+		if m := float32(u0*u0) + float32(u1*u1) + float32(u2*u2); m > limit {
+			f := lambda / float32(math.Sqrt(float64(m)))
+			u0, u1, u2 = flush(u0*f), flush(u1*f), flush(u2*f)
+		}
+		p[i], q[i], r[i] = u0, u1, u2
+	}
+}
+
+func flush(v float32) float32 {
+	if v < tiny && v > -tiny {
+		return 0
+	}
+	return v
+}
+
+// change returns Σ|x_new − x_old| and Σ x_new of a row: the extrapolated value
+// lies as far beyond the new one as the old one lies before it.
+func change(now, x []float32) (d, s float64) {
+	now = now[:len(x)]
+	for i, v := range x {
+		e := float64(now[i] - v)
+		d += max(e, -e)
+		s += float64(v)
+	}
+	return d, s
+}
