@@ -39,23 +39,22 @@ func (s *Station) expose(scene Scene, g gate, code []float64) (swept, still plan
 	f := s.o.Field
 	still = newPlane((s.o.H+2*f)*sub, (s.o.W+2*f)*sub, -float64(f), -float64(f))
 	steps := int((g.to-g.from)*sub + 0.5)
-	rows := s.o.H*sub + steps + 1
-	swept = newPlane(rows, s.o.W*sub, 0, g.from)
+	// Light of step j lands (j+½)/sub pixels beyond the gate's first.
+	swept = newPlane(s.o.H*sub+steps-1, s.o.W*sub, 0, g.from+0.5/sub)
 	step := newPlane(still.rows, still.cols, still.x0, still.y0)
 	before := s.sweep.inverse(g.from)
 	for j := range steps {
 		after := s.sweep.inverse(g.from + float64(j+1)/sub)
 		weight := (after - before) / (sub * sub)
-		lit := scene.sample(step, (before+after)/2, weight)
+		lit := scene.sample(step, s.sweep.inverse(g.from+(float64(j)+0.5)/sub), weight)
 		s.land(swept, still, step, lit, code, j)
 		before = after
 	}
 	return swept, still
 }
 
-// land moves one time step of light, the cells within lit, into the two sums
-// and clears it. A cell and a step are each a box of a quarter pixel along
-// the sweep, so that light shares evenly between two rows of cells.
+// land moves the light of time step j, the cells within lit, into the two
+// sums and clears it.
 func (s *Station) land(swept, still, step plane, lit span2, code []float64, j int) {
 	f, w := s.o.Field*sub, s.o.W*sub
 	for r := lit.y0; r < lit.y1; r++ {
@@ -68,10 +67,7 @@ func (s *Station) land(swept, still, step plane, lit span2, code []float64, j in
 			if !inside || q < f || q >= f+w || v == 0 {
 				continue
 			}
-			half := v * code[(r-f)*w+q-f] / 2
-			k := (r-f+j)*w + q - f
-			swept.pe[k] += half
-			swept.pe[k+w] += half
+			swept.pe[(r-f+j)*w+q-f] += v * code[(r-f)*w+q-f]
 		}
 	}
 }

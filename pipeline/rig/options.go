@@ -118,7 +118,7 @@ func Default() Options {
 	return Options{
 		Station: "rig", H: 64, W: 64, T: 32, Seed: 20260301, Direction: "down",
 		WindowX: 17, WindowY: 13, Margin: 12,
-		Span: 24.8, Quadratic: 0.05, Cubic: -0.03,
+		Span: 24.8, Quadratic: 0.06, Cubic: 0.03,
 		Pitch: 2, Low: 0.02, High: 0.98,
 		Streak: Sensor{SigmaX: 0.7, SigmaY: 0.75, Gain: 2, ReadNoise: 3, Offset: 210,
 			Pattern: 1.5, Dark: 4, FullWell: 110000, Bits: 16,

@@ -44,7 +44,7 @@ func glow(g stage) Scene {
 		{0.2, 0.35, 0.08, 0.06}, {0.36, 0.6, 0.16, 0.09}, {0.52, 0.4, 0.12, 0.13}, {0.68, 0.65, 0.24, 0.1}, {0.84, 0.45, 0.3, 0.11}} {
 		x, y := g.near(r[0], 0.04)*g.w, g.near(r[1], 0.06)*g.h
 		start, decay := g.from+g.near(r[2], 0.2)*g.span(), g.near(r[3], 0.1)*g.span()
-		rise, sx, sy, a := 0.02*g.span(), 0.022*g.w, 0.09*g.h, g.near(1, 0.15)
+		rise, sx, sy, a := 0.02*g.span(), max(0.022*g.w, 1), 0.09*g.h, g.near(1, 0.15)
 		c.parts = append(c.parts, func(t float64) (func(x, y float64) float64, box) {
 			u := t - start
 			if u <= 0 {

@@ -165,7 +165,7 @@ func (s *Station) Scene(name string, seed uint64) (Scene, error) {
 }
 
 // brightest returns the light of the brightest voxel, photoelectrons: the
-// voxel brightest at its centre, integrated.
+// voxel brightest along its middle, integrated.
 func (s *Station) brightest(c Scene) float64 {
 	edges := s.Edges()
 	var best, from, to float64
@@ -173,9 +173,12 @@ func (s *Station) brightest(c Scene) float64 {
 	centre := make([]float64, s.o.H*s.o.W)
 	for k := range s.o.T {
 		clear(centre)
-		c.spotCheck(centre, s.o.W, s.o.H, (edges[k]+edges[k+1])/2)
+		dt := (edges[k+1] - edges[k]) / sub
+		for j := range sub {
+			c.centres(centre, s.o.W, s.o.H, edges[k]+(float64(j)+0.5)*dt)
+		}
 		for i, v := range centre {
-			if v *= edges[k+1] - edges[k]; v > best {
+			if v *= dt; v > best {
 				best, at, from, to = v, i, edges[k], edges[k+1]
 			}
 		}
@@ -186,8 +189,8 @@ func (s *Station) brightest(c Scene) float64 {
 	return c.voxel(at%s.o.W, at/s.o.W, from, to, 2)
 }
 
-// spotCheck adds the scene at the centres of the window's pixels to dst.
-func (c Scene) spotCheck(dst []float64, w, h int, t float64) {
+// centres adds the scene at the centres of the window's pixels to dst.
+func (c Scene) centres(dst []float64, w, h int, t float64) {
 	for _, p := range c.parts {
 		f, b := p(t)
 		if f == nil {

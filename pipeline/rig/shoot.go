@@ -77,7 +77,7 @@ func (s *Station) Expected(scene Scene, f Fault) (streak, reference []float64, t
 	s.project(streak, swept, 0, widen)
 	s.splat(reference, still, s.o.Ratio, widen)
 	if f == Saturated {
-		k := 2.5 * s.streak.FullWell / slices.Max(streak)
+		k := max(1, 2.5*s.streak.full()/max(slices.Max(streak), 1))
 		truth = s.Truth(scene.Scaled(k))
 		for i := range streak {
 			streak[i] *= k

@@ -134,7 +134,7 @@ func (t Truth) Centroid(at float64) (x, y float64) {
 }
 
 // fine is the number of time steps of the light curve.
-const fine = 512
+const fine = 256
 
 // Curve samples the light per ps at evenly spaced times over the gate.
 func (t Truth) Curve() (times, rate []float64) {
