@@ -69,7 +69,7 @@ func Read(path string, lim Limits) (*Frame, error) {
 // Decode decodes a frame of size bytes from r. The name is used in errors
 // only.
 func Decode(r io.ReaderAt, size int64, name string, lim Limits) (*Frame, error) {
-	f, err := decode(source{r, size, lim.filled()})
+	f, err := decode(newSource(r, size, lim))
 	if err != nil {
 		return nil, fmt.Errorf("decode frame %q: %w", name, err)
 	}
@@ -84,7 +84,7 @@ func Shape(path string, lim Limits) (w, h int, err error) {
 		return 0, 0, fmt.Errorf("read frame %q: %w", path, err)
 	}
 	defer f.Close()
-	p, err := parse(source{f, size, lim.filled()})
+	p, err := parse(newSource(f, size, lim))
 	if err != nil {
 		return 0, 0, fmt.Errorf("read header of frame %q: %w", path, err)
 	}

@@ -41,7 +41,7 @@ func parseNPY(s source) (*picture, error) {
 // ReadNPY reads an NPY array of up to four axes. The values come in C order,
 // rounded to float32. A shape without axes means one value.
 func ReadNPY(r io.ReaderAt, size int64, lim Limits) (shape []int, data []float32, err error) {
-	s := source{r, size, lim.filled()}
+	s := newSource(r, size, lim)
 	kind, err := sniff(s)
 	if err == nil && kind != "NPY" {
 		err = fault(ErrFormat, "it is a %s file, want NPY", kind)

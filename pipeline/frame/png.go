@@ -3,6 +3,7 @@ package frame
 import (
 	"encoding/binary"
 	"errors"
+	"fmt"
 	"image"
 	"image/png"
 	"io"
@@ -155,6 +156,8 @@ func pngFault(err error) error {
 	var format png.FormatError
 	var unsupported png.UnsupportedError
 	switch {
+	case fromDevice(err):
+		return fmt.Errorf("read PNG pixel data: %w", err)
 	case errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF):
 		return fault(ErrTruncated, "its PNG pixel data end early")
 	case errors.As(err, &format) || errors.As(err, &unsupported):

@@ -63,7 +63,8 @@ func (p *page) trailer(r io.Reader, what string) error {
 		return nil
 	}
 	var one [1]byte
-	if _, err := io.ReadFull(r, one[:]); errors.Is(err, zlib.ErrChecksum) {
+	_, err := io.ReadFull(r, one[:])
+	if errors.Is(err, zlib.ErrChecksum) || fromDevice(err) {
 		return p.broken(err, what)
 	}
 	return nil
@@ -71,12 +72,11 @@ func (p *page) trailer(r io.Reader, what string) error {
 
 // broken turns the error of a decompressor into one of ours.
 func (p *page) broken(err error, what string) error {
-	if errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF) {
-		return fault(ErrTruncated, "%s ends early", what)
-	}
-	var inner *flaw
-	if p.compression == plain || errors.As(err, &inner) {
+	switch {
+	case fromDevice(err):
 		return fmt.Errorf("read %s: %w", what, err)
+	case errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF):
+		return fault(ErrTruncated, "%s ends early", what)
 	}
 	return fault(ErrFormat, "%s is damaged (%v)", what, err)
 }

@@ -13,6 +13,28 @@ type source struct {
 	lim  Limits
 }
 
+func newSource(r io.ReaderAt, size int64, lim Limits) source {
+	return source{device{r}, size, lim.filled()}
+}
+
+// device marks the errors of the reader below, so that a decompressor that
+// passes one on is not taken to complain about the file.
+type device struct{ r io.ReaderAt }
+
+func (d device) ReadAt(p []byte, off int64) (int, error) {
+	n, err := d.r.ReadAt(p, off)
+	if err != nil && err != io.EOF {
+		err = &deviceError{err}
+	}
+	return n, err
+}
+
+type deviceError struct{ error }
+
+func (e *deviceError) Unwrap() error { return e.error }
+
+func fromDevice(err error) bool { var d *deviceError; return errors.As(err, &d) }
+
 // read fills p from offset off. What is named in the error.
 func (s source) read(p []byte, off int64, what string) error {
 	if err := s.holds(off, int64(len(p)), what); err != nil {
@@ -34,10 +56,10 @@ func (s source) holds(off, n int64, what string) error {
 
 // short turns the error of a read that gave too little into one of ours.
 func (s source) short(err error, what string) error {
-	if err == nil || errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF) {
-		return fault(ErrTruncated, "the file ends within %s", what)
+	if fromDevice(err) {
+		return fmt.Errorf("read %s: %w", what, err)
 	}
-	return fmt.Errorf("read %s: %w", what, err)
+	return fault(ErrTruncated, "the file ends within %s", what)
 }
 
 // sides checks the sides a header claims against the limits.

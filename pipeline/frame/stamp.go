@@ -110,5 +110,5 @@ func (s *Stamper) tag(path string) (time.Time, error) {
 	}
 	defer f.Close()
 	lim := Limits{MaxBytes: 1 << 62} // pixels are not read
-	return tagTime(source{f, size, lim.filled()}, s.loc)
+	return tagTime(newSource(f, size, lim), s.loc)
 }
