@@ -102,7 +102,7 @@ func TestImports(t *testing.T) {
 		for _, i := range f.Imports {
 			p, _ := strconv.Unquote(i.Path.Value)
 			first, _, _ := strings.Cut(p, "/")
-			std := !strings.Contains(first, ".") && first != "unsheard"
+			std := !strings.Contains(first, ".") && first != "unsheard" || p == "unsheard/pipeline/rig" // its own example
 			if !std && !strings.HasPrefix(p, "gonum.org/v1/gonum/") && !strings.HasPrefix(p, "golang.org/x/image/") {
 				t.Errorf("%s imports %s: only the standard library, gonum and x/image are allowed", n.Name(), p)
 			}
@@ -149,7 +149,7 @@ func TestSweep(t *testing.T) {
 	s := station(t, nil)
 	near(t, "s(0)", s.At(0), 0, 0)
 	near(t, "s(span)", s.At(24.8), 31, 1e-12)
-	for _, px := range []float64{-0.5, 0, 0.3, 7, 19.2, 31, 31.5, 39.5} {
+	for _, px := range []float64{-0.5, 0, 0.3, 7, 19.2, 31, 31.5, 39.5, 41} {
 		near(t, "s(s⁻¹(px))", s.At(s.Inverse(px)), px, 1e-10) // bisection leaves 1e-14 ps
 	}
 	for _, at := range []float64{0, 5, 24} {
@@ -159,6 +159,8 @@ func TestSweep(t *testing.T) {
 	if u := s.Rate(0) / s.Rate(24.8); math.Abs(u-1) < 0.02 {
 		t.Errorf("rates at both ends agree to %.2g: the sweep should be uneven", u-1)
 	}
+	short := station(t, small)
+	near(t, "short sweep beyond its gate", short.At(short.Inverse(15.5)), 15.5, 1e-10)
 	e := s.Edges()
 	if len(e) != 33 || !slices.IsSorted(e) {
 		t.Errorf("edges %v: want 33 rising", e)

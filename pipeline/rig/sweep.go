@@ -19,22 +19,25 @@ func (s curve) rate(t float64) float64 {
 	return s.n / s.span * (1 + s.q*(2*u-1) + s.c*(3*u*u-1))
 }
 
-// reach is how far before and after the span, in spans, the curve must rise.
-const reach = 0.5
+// reach is how far before and after the span, in spans, the curve must rise
+// and can be inverted: as far as light outside the gate goes, and some more.
+func (s curve) reach() float64 { return (beyond+2)/s.n + 0.1 }
 
 // rises reports whether the curve rises at every time that can be asked for.
 func (s curve) rises() bool {
-	for i := range 201 {
-		if s.rate(s.span*(-reach+(1+2*reach)*float64(i)/200)) <= 0 {
+	reach := s.reach()
+	for i := range 401 {
+		if s.rate(s.span*(-reach+(1+2*reach)*float64(i)/400)) <= 0 {
 			return false
 		}
 	}
 	return true
 }
 
-// inverse finds t with s(t) = px by bisection; 60 halvings of two spans leave
-// less than 1e-17 spans.
+// inverse finds t with s(t) = px by bisection, to the last bit of t; beyond
+// its reach it returns the end.
 func (s curve) inverse(px float64) float64 {
+	reach := s.reach()
 	lo, hi := -reach*s.span, (1+reach)*s.span
 	for range 60 {
 		if m := (lo + hi) / 2; s.at(m) < px {
