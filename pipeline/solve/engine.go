@@ -19,29 +19,31 @@ import (
 // Part 1 reads duals of the row above its band; those are written in part 2
 // only, from copies of the extrapolated rows on both sides of the edge.
 type engine struct {
-	m             *optics.Model
-	t, h, w, step int
-	pad, cols     int
-	bands         []*band
-	tau           []float32
-	s, r          arm
-	castS         []float32 // B_sᵀ y_s on the padded plane
-	backR         []float32 // (a·B_r V)ᵀ y_r on the window
-	zero          []float32
-	alpha, sigma  float32
-	lambda        float32
-	workers       int
+	m              *optics.Model
+	t, h, w, step  int
+	pad, cols      int
+	bands          []*band
+	own, col       []float32 // 1/τ = C·col + own, on the window and the padded plane
+	s, r           arm
+	castS          []float32 // B_sᵀ y_s on the padded plane
+	backR          []float32 // (a·B_r V)ᵀ y_r on the window
+	zero           []float32
+	alpha, sigma   float32
+	lambda, shrink float32
+	workers        int
+	light          float64 // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
 }
 
 // band is a range of rows y0 ≤ y < y1 of the cube, stored plane after plane.
 type band struct {
-	y0, y1      int
-	x, p, q, r  []float32 // t·rows·w
-	ring        [2][]float32
-	streak      []float32 // (rows + (t−1)·step)·w
-	sum         []float32 // rows·w
-	top, bottom []float32 // extrapolated first and last rows, t·w
-	dx, total   float64
+	y0, y1        int
+	x, p, q, r    []float32 // t·rows·w
+	ring          [2][]float32
+	streak        []float32 // (rows + (t−1)·step)·w
+	sum           []float32 // rows·w
+	top, bottom   []float32 // extrapolated first and last rows, t·w
+	dx            float64   // see plane
+	total, square float64
 }
 
 // arm is one arm's data and dual, in data units: photoelectrons for the
@@ -72,7 +74,7 @@ func newEngine(m *optics.Model, workers int) *engine {
 	rows, cols := m.StreakShape()
 	rr, rc := m.ReferenceShape()
 	e := &engine{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers}
-	e.tau = make([]float32, e.h*e.w)
+	e.own, e.col = make([]float32, e.h*e.w), make([]float32, rows*cols)
 	e.castS = make([]float32, rows*cols)
 	e.backR = make([]float32, e.h*e.w)
 	e.zero = make([]float32, e.w)
@@ -124,12 +126,15 @@ func (e *engine) load(x []float32) {
 	e.refresh()
 }
 
-// store copies the cube out.
+// store copies the cube out. Relaxation may leave it a little under 0.
 func (e *engine) store(x []float32) {
 	for _, b := range e.bands {
 		n := (b.y1 - b.y0) * e.w
 		for k := range e.t {
-			copy(x[(k*e.h+b.y0)*e.w:][:n], b.x[k*n:(k+1)*n])
+			dst := x[(k*e.h+b.y0)*e.w:][:n]
+			for j, v := range b.x[k*n : (k+1)*n] {
+				dst[j] = max(v, 0)
+			}
 		}
 	}
 }
@@ -157,41 +162,46 @@ func (a *arm) set(data, vari []float32) {
 }
 
 // steps sets the step sizes of Pock & Chambolle 2011, lemma 2 with α = 1, for
-// the operator in data units: τ_j = γ/Σ_i|K_ij| and σ_i = 1/(γ·Σ_j|K_ij|). In
-// those units the columns of the streak arm sum to at most C whatever the
-// weights are, so that τ needs one value per window pixel. γ turns dual
-// units (1/photoelectron) into primal ones.
-func (e *engine) steps(gamma, lambda, alpha float64) {
-	ones := func(a *arm) []float32 {
-		for j, v := range a.vari {
-			a.tmp[j] = 0
-			if v > 0 {
-				a.tmp[j] = 1
-			}
-		}
-		return a.tmp[:len(a.vari)]
-	}
-	refSum := make([]float32, e.h*e.w)
-	e.m.UnprojectAbs(refSum, ones(&e.r))
-	code := e.m.Geometry().Code
-	for j := range e.tau {
-		sum := float64(code[j]) + float64(refSum[j]) + 4 + 2*alpha
-		e.tau[j] = float32(gamma / (sum * stepMargin))
-	}
-	for _, a := range []*arm{&e.s, &e.r} {
+// the operator in data units with its rows scaled by d_i: τ_j = γ/Σ_i d_i|K_ij|
+// and σ_i = d_i/(γ·Σ_j|K_ij|). d is dataRows for the data and 1 for the
+// differences. In those units the columns of the streak arm sum to at most C
+// whatever the weights are, so that τ needs one value per window pixel. γ
+// turns dual units (1/photoelectron) into primal ones.
+func (e *engine) steps(gamma, typical, lambda, alpha, round float64) {
+	var d [2][]float32
+	for n, a := range []*arm{&e.s, &e.r} {
+		d[n] = make([]float32, len(a.vari))
 		for j, v := range a.vari {
 			a.sigma[j], a.inv[j] = 0, 0
 			if v > 0 {
-				s := 1 / (gamma * stepMargin * max(float64(a.rowSum[j]), leastRow))
+				row := dataRows * typical / math.Sqrt(float64(v))
+				d[n][j] = float32(row * stepMargin / gamma)
+				s := row / (gamma * stepMargin * max(float64(a.rowSum[j]), leastRow))
 				a.sigma[j], a.inv[j] = float32(s), float32(1/(1+s*float64(v)))
 			}
 		}
 	}
+	e.m.BlurStreakAdjoint(e.col, e.s.tmp, d[0])
+	e.m.UnprojectAbs(e.own, d[1])
+	for j := range e.own {
+		e.own[j] += float32((4 + 2*alpha) * stepMargin / gamma)
+	}
 	e.alpha, e.lambda = float32(alpha), float32(lambda)
-	e.sigma = float32(1 / (gamma * stepMargin * 2 * max(1, alpha)))
+	sigma := 1 / (gamma * stepMargin * 2 * max(1, alpha))
+	e.sigma, e.shrink = float32(sigma), 1
+	if lambda > 0 {
+		e.shrink = float32(1 / (1 + sigma*round/lambda))
+	}
 }
 
 const (
+	// relax is the over-relaxation ρ of Condat 2013 (J. Optim. Theory
+	// Appl. 158, theorem 3.3: any ρ < 2 converges). Measured on the scenes
+	// of the tests, 1.8 needs half the iterations of 1.
+	relax = 1.8
+	// dataRows is the row scale of the data against the differences.
+	// Measured: 1 to 10 differ little, 3 was best or near it on all scenes.
+	dataRows = 3
 	// stepMargin keeps τσ‖K‖² under 1 although sums and steps are rounded.
 	stepMargin = 1 + 1e-5
 	// leastRow bounds the dual step of a pixel that sees almost nothing of
@@ -199,9 +209,9 @@ const (
 	leastRow = 1e-2
 )
 
-// iterate is one iteration; with count it also returns Σ|x_new − x_old| and
-// Σ x_new.
-func (e *engine) iterate(count bool) (dx, total float64) {
+// iterate is one iteration; with count it also returns Σ|v − x|, Σ v and Σ v²
+// of the primal step v.
+func (e *engine) iterate(count bool) (dx, total, square float64) {
 	e.each(len(e.bands), func(j int) { e.sweep(j, count) })
 	edges := len(e.bands) - 1
 	e.each(edges+2, func(j int) {
@@ -217,8 +227,9 @@ func (e *engine) iterate(count bool) (dx, total float64) {
 	for _, b := range e.bands {
 		dx += b.dx
 		total += b.total
+		square += b.square
 	}
-	return dx, total
+	return dx, total, square
 }
 
 // sweep is part 1 for one band.
@@ -229,8 +240,8 @@ func (e *engine) sweep(j int, count bool) {
 	clear(b.streak)
 	clear(b.sum)
 	code := e.m.Geometry().Code
-	a := plane{rows: rows, w: e.w, tau: e.tau[b.y0*e.w:][:n], code: code[b.y0*e.w:][:n], back: e.backR[b.y0*e.w:][:n],
-		castStride: e.cols, sum: b.sum, alpha: e.alpha, sigma: e.sigma, lambda: e.lambda,
+	a := plane{rows: rows, w: e.w, own: e.own[b.y0*e.w:][:n], code: code[b.y0*e.w:][:n], back: e.backR[b.y0*e.w:][:n],
+		castStride: e.cols, sum: b.sum, alpha: e.alpha, sigma: e.sigma, shrink: e.shrink, lambda: e.lambda,
 		last: b.y1 == e.h, count: count, zero: e.zero, first: true}
 	for k := range e.t {
 		cut := func(v []float32) []float32 { return v[k*n : (k+1)*n] }
@@ -242,7 +253,8 @@ func (e *engine) sweep(j int, count bool) {
 			a.up = above.q[(k+1)*m-e.w : (k+1)*m]
 		}
 		a.now, a.before = b.ring[k&1], b.ring[1-k&1]
-		a.cast = e.castS[(b.y0+k*e.step+e.pad)*e.cols+e.pad:]
+		at := (b.y0+k*e.step+e.pad)*e.cols + e.pad
+		a.cast, a.col = e.castS[at:], e.col[at:]
 		a.streak = b.streak[k*e.step*e.w:][:n]
 		a.step()
 		copy(b.top[k*e.w:(k+1)*e.w], a.now[:e.w])
@@ -251,7 +263,7 @@ func (e *engine) sweep(j int, count bool) {
 	}
 	a.before = a.now
 	a.finish()
-	b.dx, b.total = a.dx, a.total
+	b.dx, b.total, b.square = a.dx, a.total, a.square
 }
 
 // edge steps the duals of the last row of band j, which is not the last band.
@@ -261,7 +273,7 @@ func (e *engine) edge(j int) {
 	for k := range e.t {
 		lo, hi := (k+1)*n-e.w, (k+1)*n
 		row := func(v []float32, k int) []float32 { return v[k*e.w : (k+1)*e.w] }
-		dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], row(b.bottom, k), row(below.top, k), row(b.bottom, min(k+1, e.t-1)), e.alpha, e.sigma, e.lambda)
+		dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], row(b.bottom, k), row(below.top, k), row(b.bottom, min(k+1, e.t-1)), e.alpha, e.sigma, e.shrink, e.lambda)
 	}
 }
 
@@ -293,21 +305,24 @@ func (e *engine) referenceDual() {
 	e.m.Unproject(e.backR, a.tmp, a.dual)
 }
 
-// step is the proximal step of the convex conjugate of ½Σ(·−data)²/vari. The
-// model of the cube itself is the mean of its extrapolation and the one
-// before, since the operator is linear; rounding errors halve every time.
+// step is the relaxed proximal step of the convex conjugate of
+// ½Σ(·−data)²/vari. The operator is linear, so the model at the primal step v
+// is the mean of those at 2v − x and at x, and the model of the relaxed cube
+// follows by the same relaxation; rounding errors die out by |1−ρ/2| per step.
 func (a *arm) step() {
 	var chi float64
 	for j, v := range a.vari {
-		now := (a.bar[j] + a.now[j]) / 2
-		a.now[j] = now
+		old := a.now[j]
+		at := (a.bar[j] + old) / 2
+		a.now[j] = old + float32(relax*(at-old))
 		if v <= 0 {
 			continue
 		}
-		d := float64(now - a.data[j])
+		d := float64(at - a.data[j])
 		chi += d * d / float64(v)
 		u := a.dual[j] + float32(a.sigma[j]*(a.bar[j]-a.data[j]))
-		a.dual[j] = flush(u * a.inv[j])
+		u = float32(u*a.inv[j]) - a.dual[j]
+		a.dual[j] = flush(a.dual[j] + float32(relax*u))
 	}
 	a.chi2 = chi
 }

@@ -2,11 +2,10 @@ package solve
 
 import "math"
 
-// tiny is the value (photoelectrons for x, dual units for p, q, r) under
-// which numbers are set to 0: the primal step never leaves a positive x below
-// it, and the projection, which shrinks a dual by a constant factor for as
-// many iterations as its neighbours push outwards, never leaves a dual below
-// it. So no denormal number arises, which would cost a hundred cycles each.
+// tiny is the magnitude under which the cube and the duals are set to 0.
+// Relaxation shrinks a dark voxel by a constant factor per iteration, the
+// projection and the rounding-off term shrink duals; without a floor they would become
+// denormal, and arithmetic on those costs a hundred cycles each.
 const tiny = 1e-18
 
 // plane is one call of the kernel: the primal step of plane k and the dual
@@ -15,38 +14,43 @@ const tiny = 1e-18
 type plane struct {
 	rows, w int
 
-	x            []float32 // cube, plane k, read and written
-	p, q, r      []float32 // TV duals of plane k, read
-	pp, qq, rr   []float32 // TV duals of plane k−1; rr is read for plane k
-	up           []float32 // q of the row above the band, plane k (w)
-	now, before  []float32 // extrapolated planes k (written) and k−1 (read)
-	tau, code    []float32 // primal steps and code of the band
-	back         []float32 // back-projection of the reference dual
-	cast         []float32 // back-projection of the streak dual, from the band's first row in plane k
-	castStride   int       // its stride
-	streak       []float32 // streak plane of the band from its first row in plane k, added to
-	sum          []float32 // reference plane of the band, added to
-	alpha, sigma float32   // weight of ∂t; dual step
-	lambda       float32   // radius of the dual balls
-	first        bool      // k = 0: no plane k−1 to step
-	last         bool      // the band's last row is the cube's last row
-	dx, total    float64   // with count: Σ|x_new − x_old| and Σ x_new
-	count        bool
-	zero         []float32 // w zeros
+	x             []float32 // cube, plane k, read and written
+	p, q, r       []float32 // TV duals of plane k, read
+	pp, qq, rr    []float32 // TV duals of plane k−1; rr is read for plane k
+	up            []float32 // q of the row above the band, plane k (w)
+	now, before   []float32 // extrapolated planes k (written) and k−1 (read)
+	code, own     []float32 // code of the band; its part of 1/τ
+	back          []float32 // back-projection of the reference dual
+	cast          []float32 // back-projection of the streak dual, from the band's first row in plane k
+	col           []float32 // the streak arm's part of 1/τ, likewise
+	castStride    int       // stride of both
+	streak        []float32 // streak plane of the band from its first row in plane k, added to
+	sum           []float32 // reference plane of the band, added to
+	alpha, sigma  float32   // weight of ∂t; dual step
+	lambda        float32   // radius of the dual balls
+	shrink        float32   // 1/(1 + σ·μ/λ): rounds off total variation
+	first         bool      // k = 0: no plane k−1 to step
+	last          bool      // the band's last row is the cube's last row
+	dx            float64   // with count: Σ|v − x|, v the primal step
+	total, square float64   // with count: Σ v and Σ v²
+	count         bool
+	zero          []float32 // w zeros
 }
 
 // step is, for plane k and every row y and column i of the band,
 //
-//	g    = C·cast + back − (p−p[i−1]) − (q−q[y−1]) − α(r−r[k−1])
-//	xnew = max(0, x − τ·g);  now = 2·xnew − x;  x = xnew
+//	g   = C·cast + back − (p−p[i−1]) − (q−q[y−1]) − α(r−r[k−1])
+//	v   = max(0, x − g/(C·col + own))
+//	now = 2v − x;  x += ρ·(v − x)
 //	streak += C·now;  sum += now
 //
 // and then, for plane k−1 with b = before,
 //
-//	(p,q,r) += σ·(b[i+1]−b, b[y+1]−b, α·(now−b)), projected on |·| ≤ λ
+//	u = ((p,q,r) + σ·(b[i+1]−b, b[y+1]−b, α·(now−b)))·shrink, projected on |u| ≤ λ
+//	(p,q,r) += ρ·(u − (p,q,r))
 //
-// where a difference that would leave the cube is 0. The dual row at the lower
-// edge of a band that is not the last is left to edge.
+// where a difference that would leave the cube is 0 and ρ is relax. The dual
+// row at the lower edge of a band that is not the last is left to edge.
 func (a *plane) step() {
 	w := a.w
 	for y := range a.rows {
@@ -59,12 +63,13 @@ func (a *plane) step() {
 		if !a.first {
 			rBack = a.rr[lo:hi]
 		}
-		primal(a.x[lo:hi], a.now[lo:hi], a.tau[lo:hi], a.code[lo:hi], a.cast[y*a.castStride:][:w], a.back[lo:hi],
+		primal(a.x[lo:hi], a.now[lo:hi], a.code[lo:hi], a.own[lo:hi], a.cast[y*a.castStride:][:w], a.col[y*a.castStride:][:w], a.back[lo:hi],
 			a.p[lo:hi], a.q[lo:hi], qUp, a.r[lo:hi], rBack, a.streak[lo:hi], a.sum[lo:hi], a.alpha)
 		if a.count {
-			d, s := change(a.now[lo:hi], a.x[lo:hi])
+			d, s, s2 := change(a.now[lo:hi], a.x[lo:hi])
 			a.dx += d
 			a.total += s
+			a.square += s2
 		}
 		if a.first {
 			continue
@@ -90,14 +95,14 @@ func (a *plane) dualRow(y int, next []float32) {
 	} else if !a.last {
 		return
 	}
-	dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.alpha, a.sigma, a.lambda)
+	dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.alpha, a.sigma, a.shrink, a.lambda)
 }
 
 // primal is the first half of step for one row. Products are rounded before
 // they are added, so that every machine gives the same bits.
-func primal(x, now, tau, code, cast, back, p, q, qUp, r, rBack, streak, sum []float32, alpha float32) {
+func primal(x, now, code, own, cast, col, back, p, q, qUp, r, rBack, streak, sum []float32, alpha float32) {
 	n := len(x)
-	now, tau, code, cast, back = now[:n], tau[:n], code[:n], cast[:n], back[:n]
+	now, code, own, cast, col, back = now[:n], code[:n], own[:n], cast[:n], col[:n], back[:n]
 	p, q, qUp, r, rBack = p[:n], q[:n], qUp[:n], r[:n], rBack[:n]
 	streak, sum = streak[:n], sum[:n]
 	var left float32
@@ -109,19 +114,20 @@ func primal(x, now, tau, code, cast, back, p, q, qUp, r, rBack, streak, sum []fl
 		g -= q[i] - qUp[i]
 		g -= float32(alpha * (r[i] - rBack[i]))
 		old := x[i]
-		v := old - float32(tau[i]*g)
+		v := old - g/(float32(c*col[i])+own[i])
 		if !(v > tiny) {
 			v = 0
 		}
-		e := v + (v - old)
-		x[i], now[i] = v, e
+		d := v - old
+		e := v + d
+		x[i], now[i] = flush(old+float32(relax*d)), e
 		streak[i] += float32(c * e)
 		sum[i] += e
 	}
 }
 
 // dual is the second half of step for one row.
-func dual(p, q, r, b, down, next []float32, alpha, sigma, lambda float32) {
+func dual(p, q, r, b, down, next []float32, alpha, sigma, shrink, lambda float32) {
 	n := len(b)
 	p, q, r, down, next = p[:n], q[:n], r[:n], down[:n], next[:n]
 	sigmaT := sigma * alpha
@@ -132,14 +138,17 @@ func dual(p, q, r, b, down, next []float32, alpha, sigma, lambda float32) {
 		if i+1 < n {
 			right = b[i+1]
 		}
-		u0 := p[i] + float32(sigma*(right-v))
-		u1 := q[i] + float32(sigma*(down[i]-v))
-		u2 := r[i] + float32(sigmaT*(next[i]-v))
+		p0, q0, r0 := p[i], q[i], r[i]
+		u0 := (p0 + float32(sigma*(right-v))) * shrink
+		u1 := (q0 + float32(sigma*(down[i]-v))) * shrink
+		u2 := (r0 + float32(sigmaT*(next[i]-v))) * shrink
 		if m := float32(u0*u0) + float32(u1*u1) + float32(u2*u2); m > limit {
 			f := lambda / float32(math.Sqrt(float64(m)))
-			u0, u1, u2 = flush(u0*f), flush(u1*f), flush(u2*f)
+			u0, u1, u2 = u0*f, u1*f, u2*f
 		}
-		p[i], q[i], r[i] = u0, u1, u2
+		p[i] = flush(p0 + float32(relax*(u0-p0)))
+		q[i] = flush(q0 + float32(relax*(u1-q0)))
+		r[i] = flush(r0 + float32(relax*(u2-r0)))
 	}
 }
 
@@ -150,14 +159,16 @@ func flush(v float32) float32 {
 	return v
 }
 
-// change returns Σ|x_new − x_old| and Σ x_new of a row: the extrapolated value
-// lies as far beyond the new one as the old one lies before it.
-func change(now, x []float32) (d, s float64) {
+// change returns Σ|v − x_old|, Σ v and Σ v² of a row of unrelaxed values v,
+// got back from now = 2v − x_old and x = x_old + ρ(v − x_old).
+func change(now, x []float32) (d, s, s2 float64) {
 	now = now[:len(x)]
 	for i, v := range x {
-		e := float64(now[i] - v)
-		d += max(e, -e)
-		s += float64(v)
+		m := float64(now[i]-v) / (2 - relax)
+		d += max(m, -m)
+		u := float64(now[i]) - m
+		s += u
+		s2 += u * u
 	}
-	return d, s
+	return d, s, s2
 }

@@ -78,6 +78,11 @@ type Options struct {
 	// the result.
 	Workers int
 
+	// Round is the step between neighbours, in Sigma, under which total
+	// variation turns into its square (Huber), which keeps smooth slopes
+	// from becoming stairs. Default DefaultRound; negative switches it off.
+	Round float64
+
 	// Support excludes voxels that dark pixels of either arm rule out.
 	Support bool
 
@@ -89,6 +94,7 @@ type Options struct {
 const (
 	DefaultLambda = 0.5
 	DefaultAlpha  = 0.1
+	DefaultRound  = 0.05
 )
 
 // Recorder follows a solve. It is called from the goroutine that called
@@ -150,7 +156,10 @@ func (o Options) withDefaults() Options {
 	if o.Alpha == 0 {
 		o.Alpha = DefaultAlpha
 	}
-	o.Lambda, o.Alpha = max(o.Lambda, 0), max(o.Alpha, 0)
+	if o.Round == 0 {
+		o.Round = DefaultRound
+	}
+	o.Lambda, o.Alpha, o.Round = max(o.Lambda, 0), max(o.Alpha, 0), max(o.Round, 0)
 	if o.MaxIter <= 0 {
 		o.MaxIter = 600
 	}
@@ -211,8 +220,7 @@ func Solve(ctx context.Context, p Problem, x0 []float32, o Options) (*Result, er
 
 // run iterates until the stopping rule holds.
 func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
-	gamma := res.Sigma * res.Sigma
-	e.steps(gamma, res.Lambda/res.Sigma, o.Alpha)
+	e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha, o.Round*res.Sigma)
 	number := 0
 	if n := len(res.Trajectory); n > 0 {
 		number = res.Trajectory[n-1].Solve + 1
@@ -224,13 +232,16 @@ func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
 			return Cancelled
 		}
 		count := it%CheckEvery == 0 || it == o.MaxIter
-		dx, total := e.iterate(count)
+		dx, total, square := e.iterate(count)
 		res.Iterations++
 		if !count {
 			continue
 		}
 		now := Progress{Solve: number, Iteration: it, Lambda: res.Lambda, Change: dx / max(total, 1),
 			Streak: e.s.chi2 / max(1, float64(e.s.used)), Reference: e.r.chi2 / max(1, float64(e.r.used))}
+		if e.light = square / max(total, 1); it == tuneAt || it == 3*tuneAt {
+			e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha, o.Round*res.Sigma)
+		}
 		res.Trajectory = append(res.Trajectory, now)
 		if o.Recorder != nil {
 			o.Recorder.Record(now)
@@ -245,6 +256,25 @@ func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
 	}
 	return Limit
 }
+
+// gamma is the step ratio: γ should be near |x|/|y|, the size of the cube over
+// that of its duals (Chambolle & Pock 2011, sect. 3). A lit voxel holds about
+// e.light, and duals are of order 1/sigma. Before anything is known sigma
+// stands for the light.
+func (e *engine) gamma(sigma float64) float64 {
+	if e.light <= 0 {
+		return sigma * sigma
+	}
+	return stepRatio * sigma * min(max(e.light, sigma/10), 100*sigma)
+}
+
+// stepRatio is the constant of γ, tuned on the scenes of the tests at 20 to
+// 2000 photoelectrons: 0.3 to 3 differ by less than a factor 2 in iterations.
+const stepRatio = 1.5
+
+// tuneAt is the iteration after which γ is set from the light found so far;
+// again at three times it. Both are multiples of CheckEvery.
+const tuneAt = 30
 
 // CheckEvery is the number of iterations between two looks at the change.
 const CheckEvery = 10
