@@ -201,7 +201,7 @@ func (b *Bundle) file() *bundleFile {
 	f := &bundleFile{
 		Format: bundleFormat, Station: b.Station, Direction: b.Direction,
 		Created: b.Created.UTC(),
-		Frames: b.Frames, First: b.First, Warnings: b.Warnings, Window: b.Window,
+		Frames:  b.Frames, First: b.First, Warnings: b.Warnings, Window: b.Window,
 		Registration: registrationFile{b.RegistrationKind, b.Registration[:], b.RegistrationResidual},
 		Ratio:        b.Ratio, Scale: b.Scale,
 		Sweep:  sweepFile(b.Sweep),
