@@ -34,17 +34,19 @@ func (r *Reader) Counts(ctx context.Context, station string) (map[State]int, err
 	return out, rows.Err()
 }
 
-// Depth is what waits for one pass, retries and pauses included.
+// Depth is what there is to do for one pass.
 type Depth struct {
-	Jobs   int
-	Oldest time.Duration // since the longest waiting one was queued; 0: none waits
+	Jobs    int           // waiting, retries and pauses included
+	Running int           // being worked on
+	Oldest  time.Duration // since the longest waiting one was queued; 0: none waits
 }
 
-// QueueDepth returns what waits for each pass, those with nothing included.
+// QueueDepth returns what there is to do for each pass, those with nothing
+// included.
 func (r *Reader) QueueDepth(ctx context.Context) (map[Pass]Depth, error) {
 	rows, err := r.db.QueryContext(ctx, `
-		select pass, count(*), min(queued_ns) from work
-		where state in ('queued', 'later', 'failed') group by pass`)
+		select pass, state = 'running', count(*), min(queued_ns) from work
+		where state in ('queued', 'later', 'failed', 'running') group by 1, 2`)
 	if err != nil {
 		return nil, fmt.Errorf("measure the queue: %w", err)
 	}
@@ -52,12 +54,18 @@ func (r *Reader) QueueDepth(ctx context.Context) (map[Pass]Depth, error) {
 	out := map[Pass]Depth{Quick: {}, Full: {}, Spread: {}}
 	for rows.Next() {
 		var p Pass
-		var d Depth
+		var running bool
+		var n int
 		var oldest int64
-		if err := rows.Scan(&p, &d.Jobs, &oldest); err != nil {
+		if err := rows.Scan(&p, &running, &n, &oldest); err != nil {
 			return nil, fmt.Errorf("measure the queue: %w", err)
 		}
-		d.Oldest = max(r.now().Sub(at(oldest)), 0)
+		d := out[p]
+		if running {
+			d.Running = n
+		} else {
+			d.Jobs, d.Oldest = n, max(r.now().Sub(at(oldest)), 0)
+		}
 		out[p] = d
 	}
 	return out, rows.Err()
