@@ -70,7 +70,7 @@ type Options struct {
 	MaxIter int
 
 	// Tol is the relative change per iteration at which a solve has
-	// converged, see the package comment. Default 2e-4. Negative: run
+	// converged, see the package comment. Default 5e-4. Negative: run
 	// MaxIter iterations.
 	Tol float64
 
@@ -83,16 +83,13 @@ type Options struct {
 	// from becoming stairs. Default DefaultRound; negative switches it off.
 	Round float64
 
-	// Support excludes voxels that dark pixels of either arm rule out.
-	Support bool
-
 	// Recorder is told of progress. Nil: nobody.
 	Recorder Recorder
 }
 
 // Defaults.
 const (
-	DefaultLambda = 0.5
+	DefaultLambda = 0.4
 	DefaultAlpha  = 0.1
 	DefaultRound  = 0.05
 )
@@ -164,7 +161,7 @@ func (o Options) withDefaults() Options {
 		o.MaxIter = 600
 	}
 	if o.Tol == 0 {
-		o.Tol = 2e-4
+		o.Tol = 5e-4
 	}
 	return o
 }
