@@ -19,19 +19,19 @@ import (
 // Part 1 reads duals of the row above its band; those are written in part 2
 // only, from copies of the extrapolated rows on both sides of the edge.
 type engine struct {
-	m              *optics.Model
-	t, h, w, step  int
-	pad, cols      int
-	bands          []*band
-	own, col       []float32 // 1/τ = C·col + own, on the window and the padded plane
-	s, r           arm
-	castS          []float32 // B_sᵀ y_s on the padded plane
-	backR          []float32 // (a·B_r V)ᵀ y_r on the window
-	zero           []float32
-	alpha, sigma   float32
-	lambda, shrink float32
-	workers        int
-	light          float64 // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
+	m             *optics.Model
+	t, h, w, step int
+	pad, cols     int
+	bands         []*band
+	own, col      []float32 // 1/τ = C·col + own, on the window and the padded plane
+	s, r          arm
+	castS         []float32 // B_sᵀ y_s on the padded plane
+	backR         []float32 // (a·B_r V)ᵀ y_r on the window
+	zero          []float32
+	alpha, sigma  float32
+	lambda        float32
+	workers       int
+	light         float64 // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
 }
 
 // band is a range of rows y0 ≤ y < y1 of the cube, stored plane after plane.
@@ -167,7 +167,7 @@ func (a *arm) set(data, vari []float32) {
 // differences. In those units the columns of the streak arm sum to at most C
 // whatever the weights are, so that τ needs one value per window pixel. γ
 // turns dual units (1/photoelectron) into primal ones.
-func (e *engine) steps(gamma, typical, lambda, alpha, round float64) {
+func (e *engine) steps(gamma, typical, lambda, alpha float64) {
 	var d [2][]float32
 	for n, a := range []*arm{&e.s, &e.r} {
 		d[n] = make([]float32, len(a.vari))
@@ -187,11 +187,7 @@ func (e *engine) steps(gamma, typical, lambda, alpha, round float64) {
 		e.own[j] += float32((4 + 2*alpha) * stepMargin / gamma)
 	}
 	e.alpha, e.lambda = float32(alpha), float32(lambda)
-	sigma := 1 / (gamma * stepMargin * 2 * max(1, alpha))
-	e.sigma, e.shrink = float32(sigma), 1
-	if lambda > 0 {
-		e.shrink = float32(1 / (1 + sigma*round/lambda))
-	}
+	e.sigma = float32(1 / (gamma * stepMargin * 2 * max(1, alpha)))
 }
 
 const (
@@ -241,7 +237,7 @@ func (e *engine) sweep(j int, count bool) {
 	clear(b.sum)
 	code := e.m.Geometry().Code
 	a := plane{rows: rows, w: e.w, own: e.own[b.y0*e.w:][:n], code: code[b.y0*e.w:][:n], back: e.backR[b.y0*e.w:][:n],
-		castStride: e.cols, sum: b.sum, alpha: e.alpha, sigma: e.sigma, shrink: e.shrink, lambda: e.lambda,
+		castStride: e.cols, sum: b.sum, alpha: e.alpha, sigma: e.sigma, lambda: e.lambda,
 		last: b.y1 == e.h, count: count, zero: e.zero, first: true}
 	for k := range e.t {
 		cut := func(v []float32) []float32 { return v[k*n : (k+1)*n] }
@@ -273,7 +269,7 @@ func (e *engine) edge(j int) {
 	for k := range e.t {
 		lo, hi := (k+1)*n-e.w, (k+1)*n
 		row := func(v []float32, k int) []float32 { return v[k*e.w : (k+1)*e.w] }
-		dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], row(b.bottom, k), row(below.top, k), row(b.bottom, min(k+1, e.t-1)), e.alpha, e.sigma, e.shrink, e.lambda)
+		dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], row(b.bottom, k), row(below.top, k), row(b.bottom, min(k+1, e.t-1)), e.alpha, e.sigma, e.lambda)
 	}
 }
 

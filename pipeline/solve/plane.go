@@ -3,9 +3,9 @@ package solve
 import "math"
 
 // tiny is the magnitude under which the cube and the duals are set to 0.
-// Relaxation shrinks a dark voxel by a constant factor per iteration, the
-// projection and the rounding-off term shrink duals; without a floor they would become
-// denormal, and arithmetic on those costs a hundred cycles each.
+// Relaxation shrinks a dark voxel by a constant factor per iteration, and the
+// projection a dual whose neighbours push outwards; without a floor they would
+// become denormal, and arithmetic on those costs a hundred cycles each.
 const tiny = 1e-18
 
 // plane is one call of the kernel: the primal step of plane k and the dual
@@ -28,7 +28,6 @@ type plane struct {
 	sum           []float32 // reference plane of the band, added to
 	alpha, sigma  float32   // weight of ∂t; dual step
 	lambda        float32   // radius of the dual balls
-	shrink        float32   // 1/(1 + σ·μ/λ): rounds off total variation
 	first         bool      // k = 0: no plane k−1 to step
 	last          bool      // the band's last row is the cube's last row
 	dx            float64   // with count: Σ|v − x|, v the primal step
@@ -46,7 +45,7 @@ type plane struct {
 //
 // and then, for plane k−1 with b = before,
 //
-//	u = ((p,q,r) + σ·(b[i+1]−b, b[y+1]−b, α·(now−b)))·shrink, projected on |u| ≤ λ
+//	u = (p,q,r) + σ·(b[i+1]−b, b[y+1]−b, α·(now−b)), projected on |u| ≤ λ
 //	(p,q,r) += ρ·(u − (p,q,r))
 //
 // where a difference that would leave the cube is 0 and ρ is relax. The dual
@@ -95,7 +94,7 @@ func (a *plane) dualRow(y int, next []float32) {
 	} else if !a.last {
 		return
 	}
-	dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.alpha, a.sigma, a.shrink, a.lambda)
+	dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.alpha, a.sigma, a.lambda)
 }
 
 // primal is the first half of step for one row. Products are rounded before
@@ -127,7 +126,7 @@ func primal(x, now, code, own, cast, col, back, p, q, qUp, r, rBack, streak, sum
 }
 
 // dual is the second half of step for one row.
-func dual(p, q, r, b, down, next []float32, alpha, sigma, shrink, lambda float32) {
+func dual(p, q, r, b, down, next []float32, alpha, sigma, lambda float32) {
 	n := len(b)
 	p, q, r, down, next = p[:n], q[:n], r[:n], down[:n], next[:n]
 	sigmaT := sigma * alpha
@@ -139,9 +138,9 @@ func dual(p, q, r, b, down, next []float32, alpha, sigma, shrink, lambda float32
 			right = b[i+1]
 		}
 		p0, q0, r0 := p[i], q[i], r[i]
-		u0 := (p0 + float32(sigma*(right-v))) * shrink
-		u1 := (q0 + float32(sigma*(down[i]-v))) * shrink
-		u2 := (r0 + float32(sigmaT*(next[i]-v))) * shrink
+		u0 := p0 + float32(sigma*(right-v))
+		u1 := q0 + float32(sigma*(down[i]-v))
+		u2 := r0 + float32(sigmaT*(next[i]-v))
 		if m := float32(u0*u0) + float32(u1*u1) + float32(u2*u2); m > limit {
 			f := lambda / float32(math.Sqrt(float64(m)))
 			u0, u1, u2 = u0*f, u1*f, u2*f

@@ -78,11 +78,6 @@ type Options struct {
 	// the result.
 	Workers int
 
-	// Round is the step between neighbours, in Sigma, under which total
-	// variation turns into its square (Huber), which keeps smooth slopes
-	// from becoming stairs. Default DefaultRound; negative switches it off.
-	Round float64
-
 	// Recorder is told of progress. Nil: nobody.
 	Recorder Recorder
 }
@@ -91,7 +86,6 @@ type Options struct {
 const (
 	DefaultLambda = 0.4
 	DefaultAlpha  = 0.1
-	DefaultRound  = 0.05
 )
 
 // Recorder follows a solve. It is called from the goroutine that called
@@ -153,10 +147,7 @@ func (o Options) withDefaults() Options {
 	if o.Alpha == 0 {
 		o.Alpha = DefaultAlpha
 	}
-	if o.Round == 0 {
-		o.Round = DefaultRound
-	}
-	o.Lambda, o.Alpha, o.Round = max(o.Lambda, 0), max(o.Alpha, 0), max(o.Round, 0)
+	o.Lambda, o.Alpha = max(o.Lambda, 0), max(o.Alpha, 0)
 	if o.MaxIter <= 0 {
 		o.MaxIter = 600
 	}
@@ -217,7 +208,7 @@ func Solve(ctx context.Context, p Problem, x0 []float32, o Options) (*Result, er
 
 // run iterates until the stopping rule holds.
 func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
-	e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha, o.Round*res.Sigma)
+	e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha)
 	number := 0
 	if n := len(res.Trajectory); n > 0 {
 		number = res.Trajectory[n-1].Solve + 1
@@ -237,7 +228,7 @@ func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
 		now := Progress{Solve: number, Iteration: it, Lambda: res.Lambda, Change: dx / max(total, 1),
 			Streak: e.s.chi2 / max(1, float64(e.s.used)), Reference: e.r.chi2 / max(1, float64(e.r.used))}
 		if e.light = square / max(total, 1); it == tuneAt || it == 3*tuneAt {
-			e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha, o.Round*res.Sigma)
+			e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha)
 		}
 		res.Trajectory = append(res.Trajectory, now)
 		if o.Recorder != nil {
