@@ -1,0 +1,269 @@
+package export
+
+import (
+	"bytes"
+	"fmt"
+	"image/color"
+	"io"
+	"math"
+
+	"gonum.org/v1/plot"
+	"gonum.org/v1/plot/font"
+	"gonum.org/v1/plot/plotter"
+	"gonum.org/v1/plot/text"
+	"gonum.org/v1/plot/vg"
+	"gonum.org/v1/plot/vg/draw"
+	"gonum.org/v1/plot/vg/vgsvg"
+
+	"unsheard/pipeline/measure"
+)
+
+var (
+	lineColour = color.RGBA{0x1f, 0x4e, 0x8c, 0xff}
+	bandColour = color.RGBA{0xc4, 0xd6, 0xec, 0xff}
+	markColour = color.RGBA{0xb0, 0x3a, 0x1e, 0xff}
+)
+
+// lightCurve is the report's light curve, or, where the report has none, the
+// cube's own: light per frame over its length.
+func lightCurve(r *Result) measure.Curve {
+	if c, ok := r.Report.Curves["light"]; ok && len(c.Time) > 0 && len(c.Time) == len(c.Value) {
+		return c
+	}
+	q := r.Cube
+	c := measure.Curve{Name: "light", TimeUnit: "ps", Unit: "photoelectrons/ps", Time: q.Time}
+	for k := range q.T {
+		c.Value = append(c.Value, q.Sum(k)/q.Duration(k))
+	}
+	return c
+}
+
+// light draws the light curve with its band of one deviation, and marks peak
+// and full width at half maximum where they were measured.
+func light(w io.Writer, r *Result) error {
+	c := lightCurve(r)
+	p := plot.New()
+	style(p)
+	p.Title.Text = title(r)
+	p.X.Label.Text = "time (" + c.TimeUnit + ")"
+	p.Y.Label.Text = "light (" + c.Unit + ")"
+	grid := plotter.NewGrid()
+	grid.Vertical.Color, grid.Horizontal.Color = color.Gray{0xe0}, color.Gray{0xe0}
+	p.Add(grid)
+	pts := points(c)
+	if band := bandOf(c); band != nil {
+		p.Add(band)
+	}
+	line, err := plotter.NewLine(pts)
+	if err != nil {
+		return fmt.Errorf("light curve: %w", err)
+	}
+	line.Color, line.Width = lineColour, vg.Points(1.8)
+	p.Add(line)
+	if len(pts) <= 60 {
+		dots, err := plotter.NewScatter(pts)
+		if err != nil {
+			return fmt.Errorf("light curve: %w", err)
+		}
+		dots.GlyphStyle = draw.GlyphStyle{Color: lineColour, Radius: vg.Points(2.5), Shape: draw.CircleGlyph{}}
+		p.Add(dots)
+	}
+	p.Y.Min = min(0, p.Y.Min)
+	p.Y.Max += 0.14 * (p.Y.Max - p.Y.Min)
+	if !(p.Y.Max > p.Y.Min) {
+		p.Y.Max = p.Y.Min + 1
+	}
+	if !(p.X.Max > p.X.Min) {
+		p.X.Min, p.X.Max = p.X.Min-1, p.X.Max+1
+	}
+	if err := mark(p, r, c); err != nil {
+		return err
+	}
+	cv := vgsvg.New(20*vg.Centimeter, 12*vg.Centimeter)
+	area := draw.Crop(draw.New(cv), vg.Points(6), -vg.Points(16), vg.Points(6), -vg.Points(8))
+	p.Draw(area)
+	var b bytes.Buffer
+	if _, err := cv.WriteTo(&b); err != nil {
+		return err
+	}
+	_, err = w.Write(b.Bytes())
+	return err
+}
+
+func style(p *plot.Plot) {
+	sans := func(t *text.Style, size float64) {
+		t.Font = font.Font{Typeface: "Liberation", Variant: "Sans", Size: vg.Points(size)}
+	}
+	sans(&p.Title.TextStyle, 14)
+	p.Title.Padding = vg.Points(8)
+	for _, a := range []*plot.Axis{&p.X, &p.Y} {
+		sans(&a.Label.TextStyle, 13)
+		sans(&a.Tick.Label, 11)
+		a.Label.Padding = vg.Points(4)
+		a.Padding = 0
+		a.Tick.Marker = plot.TickerFunc(func(lo, hi float64) (out []plot.Tick) {
+			at, label := ticks(lo, hi)
+			for i := range at {
+				out = append(out, plot.Tick{Value: at[i], Label: label[i]})
+			}
+			return out
+		})
+	}
+	p.BackgroundColor = color.White
+}
+
+// points leaves out values that are not finite.
+func points(c measure.Curve) plotter.XYs {
+	var out plotter.XYs
+	for i, v := range c.Value {
+		if finite(v) && finite(c.Time[i]) {
+			out = append(out, plotter.XY{X: c.Time[i], Y: v})
+		}
+	}
+	return out
+}
+
+func finite(f float64) bool { return !math.IsNaN(f) && !math.IsInf(f, 0) }
+
+// bandOf is the area of one deviation around the curve, nil if unknown.
+func bandOf(c measure.Curve) plot.Plotter {
+	if len(c.Sigma) != len(c.Value) {
+		return nil
+	}
+	var up, down plotter.XYs
+	for i, v := range c.Value {
+		if s := c.Sigma[i]; finite(v) && finite(s) && finite(c.Time[i]) {
+			up = append(up, plotter.XY{X: c.Time[i], Y: v + s})
+			down = append(down, plotter.XY{X: c.Time[i], Y: v - s})
+		}
+	}
+	for i := len(down) - 1; i >= 0; i-- {
+		up = append(up, down[i])
+	}
+	if len(up) < 4 {
+		return nil
+	}
+	band, err := plotter.NewPolygon(up)
+	if err != nil {
+		return nil
+	}
+	band.Color, band.LineStyle.Width = bandColour, 0
+	return band
+}
+
+// mark draws the peak and the width, each with its value beside it.
+func mark(p *plot.Plot, r *Result, c measure.Curve) error {
+	q := r.Report.Quantities
+	peak, okPeak := q["peak_time"]
+	height, okHeight := q["peak_light"]
+	if !okPeak || !okHeight || !finite(peak.Value) || !finite(height.Value) {
+		return nil
+	}
+	if err := dashed(p, peak.Value, p.Y.Min, peak.Value, height.Value); err != nil {
+		return err
+	}
+	labels := plotter.XYLabels{XYs: plotter.XYs{{X: peak.Value, Y: height.Value}},
+		Labels: []string{"peak " + quantityText(peak)}}
+	if width, ok := q["fwhm"]; ok {
+		if a, b, ok := halfway(c, height.Value/2); ok {
+			if err := dashed(p, a, height.Value/2, b, height.Value/2); err != nil {
+				return err
+			}
+			labels.XYs = append(labels.XYs, plotter.XY{X: b, Y: height.Value / 2})
+			labels.Labels = append(labels.Labels, "FWHM "+quantityText(width))
+		}
+	}
+	l, err := plotter.NewLabels(labels)
+	if err != nil {
+		return fmt.Errorf("light curve: %w", err)
+	}
+	place(p, l, c)
+	p.Add(l)
+	return nil
+}
+
+// place puts the peak's text above the band and the width's to the right of
+// the curve, or above its line where there is no room.
+func place(p *plot.Plot, l *plotter.Labels, c measure.Curve) {
+	along := func(i int) float64 { return (l.XYs[i].X - p.X.Min) / (p.X.Max - p.X.Min) }
+	for i := range l.TextStyle {
+		t := &l.TextStyle[i]
+		t.Font = font.Font{Typeface: "Liberation", Variant: "Sans", Size: vg.Points(12)}
+		t.Color = markColour
+		t.XAlign, t.YAlign = text.XCenter, text.YBottom
+	}
+	l.XYs[0].Y = top(c)
+	l.Offset = vg.Point{Y: vg.Points(4)}
+	switch f := along(0); {
+	case f > 0.75:
+		l.TextStyle[0].XAlign = text.XRight
+	case f < 0.25:
+		l.TextStyle[0].XAlign = text.XLeft
+	}
+	if len(l.XYs) < 2 {
+		return
+	}
+	l.TextStyle[1].XAlign = text.XRight
+	if along(1) < 0.65 {
+		l.TextStyle[1].XAlign = text.XLeft
+		l.XYs[1].X += 0.03 * (p.X.Max - p.X.Min)
+	}
+}
+
+// top is the highest point of the curve's band.
+func top(c measure.Curve) float64 {
+	hi := math.Inf(-1)
+	for i, v := range c.Value {
+		if len(c.Sigma) == len(c.Value) && finite(c.Sigma[i]) {
+			v += c.Sigma[i]
+		}
+		if finite(v) {
+			hi = max(hi, v)
+		}
+	}
+	return hi
+}
+
+func dashed(p *plot.Plot, x0, y0, x1, y1 float64) error {
+	l, err := plotter.NewLine(plotter.XYs{{X: x0, Y: y0}, {X: x1, Y: y1}})
+	if err != nil {
+		return fmt.Errorf("light curve: %w", err)
+	}
+	l.Color, l.Width = markColour, vg.Points(1.2)
+	l.Dashes = []vg.Length{vg.Points(5), vg.Points(3)}
+	p.Add(l)
+	return nil
+}
+
+// halfway returns where the curve crosses level around its highest value,
+// interpolated linearly.
+func halfway(c measure.Curve, level float64) (a, b float64, ok bool) {
+	top := 0
+	for i, v := range c.Value {
+		if v > c.Value[top] {
+			top = i
+		}
+	}
+	cross := func(step int) (float64, bool) {
+		for i := top; i+step >= 0 && i+step < len(c.Value); i += step {
+			u, v := c.Value[i], c.Value[i+step]
+			if u >= level && v < level {
+				return c.Time[i] + (c.Time[i+step]-c.Time[i])*(u-level)/(u-v), true
+			}
+		}
+		return 0, false
+	}
+	a, okA := cross(-1)
+	b, okB := cross(1)
+	return a, b, okA && okB
+}
+
+// quantityText writes value and deviation with the decimals that the
+// deviation's first two digits need.
+func quantityText(q measure.Quantity) string {
+	if q.Sigma == nil || !finite(*q.Sigma) || *q.Sigma <= 0 {
+		return fmt.Sprintf("%.4g %s", q.Value, q.Unit)
+	}
+	digits := min(6, max(0, 1-int(math.Floor(math.Log10(*q.Sigma)))))
+	return fmt.Sprintf("%.*f ± %.*f %s", digits, q.Value, digits, *q.Sigma, q.Unit)
+}
