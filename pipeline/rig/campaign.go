@@ -6,6 +6,8 @@ import (
 	"fmt"
 	"math/rand/v2"
 	"os"
+	"slices"
+	"strings"
 	"time"
 )
 
@@ -109,12 +111,13 @@ func (c Campaign) Validate() error {
 			bad = append(bad, err)
 		}
 	}
-	known := map[Fault]bool{}
-	for _, f := range Faults() {
-		known[f] = true
+	for _, n := range c.Scenes {
+		if !slices.Contains(Scenes(), n) {
+			bad = append(bad, fmt.Errorf("no scene %q: there are %s", n, strings.Join(Scenes(), ", ")))
+		}
 	}
 	for _, f := range c.Faults {
-		if !known[f] {
+		if !slices.Contains(Faults(), f) {
 			bad = append(bad, fmt.Errorf("no fault %q: there are %v", f, Faults()))
 		}
 	}

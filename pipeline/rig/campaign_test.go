@@ -210,7 +210,7 @@ func TestCampaignValidate(t *testing.T) {
 		{"rate", func(c *Campaign) { c.FaultRate = 1.5 }, "fault rate 1.5"},
 		{"name", func(c *Campaign) { c.StreakName = "%Q" }, "field %Q"},
 		{"fault", func(c *Campaign) { c.Faults = []Fault{"flood"} }, `no fault "flood"`},
-		{"scene", func(c *Campaign) { c.Scenes, c.Shots = []string{"volcano"}, 1 }, `no scene "volcano"`},
+		{"scene", func(c *Campaign) { c.Scenes, c.Shots = []string{"basin", "volcano"}, 1 }, `no scene "volcano"`},
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			k := folders(t)
@@ -218,6 +218,9 @@ func TestCampaignValidate(t *testing.T) {
 			err := s.WriteCampaign(t.Context(), k, nil)
 			if err == nil || !strings.Contains(err.Error(), c.want) {
 				t.Errorf("got %v, want an error with %q", err, c.want)
+			}
+			if _, err := os.Stat(k.Truth); err == nil && k.Truth != k.Reference {
+				t.Error("a refused campaign made folders")
 			}
 		})
 	}
