@@ -1,0 +1,166 @@
+package pipeline
+
+import (
+	"context"
+	"fmt"
+	"strings"
+	"time"
+
+	"unsheard/pipeline/calib"
+	"unsheard/pipeline/measure"
+	"unsheard/pipeline/solve"
+)
+
+// Event is one stage of a job, for the log.
+type Event struct {
+	Time    time.Time `json:"time"`
+	Stage   string    `json:"stage"`
+	Seconds float64   `json:"seconds"`
+	Detail  string    `json:"detail,omitempty"`
+}
+
+// Seconds is the time the whole job took.
+func (r *Result) Seconds() float64 {
+	var s float64
+	for _, v := range r.Provenance.Stages {
+		s += v
+	}
+	return s
+}
+
+// shot is a job on its way.
+type shot struct {
+	job  Job
+	prov Provenance
+	seen func(Event)
+
+	bundle           *calib.Bundle
+	station          *station
+	streak, ref      *plane
+	refFrame         *calib.Corrected
+	solved           *solve.Result
+	result           *Result
+	expected, expSig float64
+}
+
+// Run does one job. seen, if not nil, is told of every stage as it ends. It
+// returns the context's error if that ends first.
+func Run(ctx context.Context, job Job, seen func(Event)) (*Result, error) {
+	if err := job.fill(); err != nil {
+		return nil, err
+	}
+	if seen == nil {
+		seen = func(Event) {}
+	}
+	s := &shot{job: job, prov: newProvenance(&job), seen: seen}
+	for _, st := range []struct {
+		name string
+		do   func(context.Context) (string, error)
+	}{{"bundle", s.load}, {"read", s.read}, {"reconstruct", s.reconstruct}, {"measure", s.measure}} {
+		if err := ctx.Err(); err != nil {
+			return nil, err
+		}
+		began := time.Now()
+		detail, err := st.do(ctx)
+		if err != nil {
+			return nil, err
+		}
+		took := time.Since(began).Seconds()
+		s.prov.Stages[st.name] = took
+		seen(Event{Time: time.Now().UTC(), Stage: st.name, Seconds: took, Detail: detail})
+	}
+	s.result.Provenance = s.prov
+	return s.result, nil
+}
+
+func (s *shot) load(context.Context) (string, error) {
+	b, err := calib.Load(s.job.Bundle)
+	if err != nil {
+		return "", err
+	}
+	s.bundle = b
+	s.prov.BundleID, s.prov.BundleFolder, s.prov.Bundle = b.ID, s.job.Bundle, b.Station
+	s.station, err = newStation(b, s.job.Coarse)
+	return fmt.Sprintf("bundle %.12s", b.ID), err
+}
+
+func (s *shot) read(context.Context) (string, error) {
+	raw, src, err := read(s.job.Streak, s.job.Limits)
+	if err != nil {
+		return "", err
+	}
+	s.prov.Streak = src
+	turned, err := raw.Turn(s.bundle.Direction)
+	if err != nil {
+		return "", err
+	}
+	st, err := correct(&s.bundle.Streak, "streak", s.job.Streak, turned)
+	if err != nil {
+		return "", err
+	}
+	s.streak = s.station.streak(st)
+	if raw, src, err = read(s.job.Reference, s.job.Limits); err != nil {
+		return "", err
+	}
+	s.prov.Reference = src
+	if s.refFrame, err = correct(&s.bundle.Reference, "reference", s.job.Reference, raw); err != nil {
+		return "", err
+	}
+	s.ref = s.station.reference(s.refFrame)
+	return fmt.Sprintf("%d + %d bytes", s.prov.Streak.Bytes, s.prov.Reference.Bytes), nil
+}
+
+func (s *shot) reconstruct(ctx context.Context) (string, error) {
+	p := solve.Problem{Model: s.station.model,
+		Streak: s.streak.pe, StreakVar: s.streak.vari, Reference: s.ref.pe, ReferenceVar: s.ref.vari,
+		StreakNoise:    &solve.Noise{Read: s.streak.readVar, Gain: s.streak.slope, Floor: s.bundle.Streak.Floor},
+		ReferenceNoise: &solve.Noise{Read: s.ref.readVar, Gain: s.ref.slope, Floor: s.bundle.Reference.Floor}}
+	res, err := solve.Auto(ctx, p, solve.Options{Workers: s.job.Workers})
+	if err != nil {
+		return "", fmt.Errorf("shot %s: %w", s.job.Shot, err)
+	}
+	if res.Status == solve.Cancelled {
+		return "", context.Cause(ctx)
+	}
+	s.solved = res
+	return fmt.Sprintf("%s after %d iterations, lambda %.3g", res.Status, res.Iterations, res.Lambda), nil
+}
+
+func (s *shot) measure(context.Context) (string, error) {
+	c, outside := s.station.cube(s.solved.X)
+	r := s.solved
+	s.prov.Solver = Solver{Method: "preconditioned primal-dual, total variation, discrepancy principle",
+		Status: string(r.Status), Iterations: r.Iterations, Lambda: r.Lambda, Alpha: r.Alpha,
+		Misfit: r.Chi2Streak, MisfitOther: r.Chi2Reference, Note: strings.Join(r.Notes, "; "),
+		GuardFrames: s.station.lead, OutsideShare: outside}
+	light, sigma := s.station.expected(s.refFrame)
+	in := measure.Input{Cube: c,
+		Streak:    s.streak.arm("streak", r.StreakModel, r.Chi2Streak, s.job.Coarse),
+		Reference: s.ref.arm("reference", r.ReferenceModel, r.Chi2Reference, s.job.Coarse),
+		Expected:  light, ExpectedSigma: sigma, Transmission: s.transmission(),
+		ScaleSigma: s.bundle.Scale.Sigma, OutsideSpan: outside,
+		Fit:   measure.Fit{Converged: r.Status == solve.Converged, Iterations: r.Iterations, Lambda: r.Lambda, Alpha: r.Alpha},
+		Extra: s.job.Extra}
+	rep, err := measure.Measure(in)
+	if err != nil {
+		return "", err
+	}
+	rep.Notes = append(rep.Notes, r.Notes...)
+	s.result = &Result{Cube: c, Report: rep, Planes: []Plane{
+		s.streak.shown("streak", r.StreakModel, r.StreakVar),
+		s.ref.shown("reference", r.ReferenceModel, r.ReferenceVar)}}
+	return rep.Verdict.Grade, nil
+}
+
+func (p *plane) shown(arm string, model, vari []float32) Plane {
+	return Plane{Arm: arm, X: p.x, Y: p.y, W: p.w, H: p.h, Measured: p.pe, Model: model, Variance: vari}
+}
+
+// transmission is the mean of the code.
+func (s *shot) transmission() float64 {
+	var sum float64
+	for _, c := range s.bundle.Code {
+		sum += float64(c)
+	}
+	return sum / float64(len(s.bundle.Code))
+}
