@@ -34,6 +34,8 @@ type Task struct {
 	Name          string
 	StreakPath    string // as AddFrames was given it
 	ReferencePath string
+	Taken         time.Time // as in Shot
+	Weak          bool      // one of its frames has a weak stamp
 	Pass          Pass
 	Bundle        string
 	Attempt       int   // 1 for the first

@@ -100,7 +100,11 @@ func (s *Store) begin(ctx context.Context, tx *sql.Tx, w workRow) (Task, error) 
 		}
 	}
 	t := Task{ShotID: sh.ID, Station: sh.Station, Name: sh.Name, StreakPath: sh.StreakPath,
-		ReferencePath: sh.ReferencePath, Pass: w.pass, Bundle: w.bundle, Attempt: w.tries + 1, Suspect: w.suspect}
+		ReferencePath: sh.ReferencePath, Taken: sh.Taken, Pass: w.pass, Bundle: w.bundle, Attempt: w.tries + 1, Suspect: w.suspect}
+	if err := tx.QueryRowContext(ctx, "select exists (select 1 from frame where id in (?, ?) and weak)",
+		sh.Streak, sh.Reference).Scan(&t.Weak); err != nil {
+		return Task{}, err
+	}
 	err = tx.QueryRowContext(ctx, `
 		insert into attempt (shot_id, pass, bundle_id, number, started_ns, host) values (?, ?, ?, ?, ?, ?) returning id`,
 		w.shot, w.pass, w.bundle, t.Attempt, now, s.o.Host).Scan(&t.AttemptID)
