@@ -1,0 +1,5 @@
+//go:build !linux && !windows
+
+package daemon
+
+func memoryTotal() int64 { return fallbackMemory }

@@ -1,0 +1,158 @@
+package daemon_test
+
+import (
+	"encoding/json"
+	"fmt"
+	"math"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"testing"
+	"time"
+
+	"unsheard/pipeline/rig"
+	"unsheard/queue"
+)
+
+// packet is a Gaussian packet of light: it crosses the window in a straight
+// line while it brightens and fades.
+type packet struct {
+	x, y, vx, vy float64 // px at t0, px/ps
+	t0, sigma    float64 // ps
+	size, total  float64 // px, photoelectrons
+}
+
+func (p packet) scene() rig.Scene {
+	return rig.NewScene("packet", func(x, y, t float64) float64 {
+		dx, dy, dt := x-p.x-p.vx*(t-p.t0), y-p.y-p.vy*(t-p.t0), (t-p.t0)/p.sigma
+		return p.total / (2 * math.Pi * p.size * p.size) * math.Exp(-(dx*dx+dy*dy)/(2*p.size*p.size)) *
+			math.Exp(-dt*dt/2) / (p.sigma * math.Sqrt(2*math.Pi))
+	})
+}
+
+// The accuracy that a moving packet's numbers must have, as parts of their true
+// values, with the calibration made from raw series alone.
+const (
+	speedWithin = 0.03
+	widthWithin = 0.10
+	lightWithin = 0.05
+)
+
+// fwhmPerSigma is 2√(2 ln 2), the full width at half maximum of a Gaussian of
+// unit deviation.
+var fwhmPerSigma = 2 * math.Sqrt(2*math.Ln2)
+
+// TestNumbers has frames written by another program (tifffile, in several ways)
+// into watched folders and compares the results, read by h5py, silx and Octave,
+// with what was put in.
+func TestNumbers(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: reconstructs shots at full size")
+	}
+	l := newLab(t, func() rig.Options { o := rig.Default(); o.Station = "bay-a"; return o }(), "")
+	packets := []packet{
+		{x: 31, y: 30, vx: 1.1, vy: 0.55, t0: 12, sigma: 3.4, size: 3.2, total: 150000},
+		{x: 34, y: 33, vx: -0.8, vy: 0.9, t0: 11.5, sigma: 2.6, size: 2.8, total: 100000},
+		{x: 30, y: 34, vx: 0.3, vy: -1.2, t0: 13, sigma: 3, size: 3.5, total: 200000},
+	}
+	raw := l.path("raw")
+	if err := os.Mkdir(raw, 0o755); err != nil {
+		t.Fatal(err)
+	}
+	page, stop := l.serve(t)
+	for i, p := range packets {
+		a, b, _ := l.station.Shoot(p.scene(), uint64(100+i))
+		for name, im := range map[string]rig.Image{"S": a, "R": b} {
+			if err := l.station.Save(im, filepath.Join(raw, fmt.Sprintf("%s_20260314T0900%02d.250000.tif", name, i))); err != nil {
+				t.Fatal(err)
+			}
+		}
+	}
+	t.Logf("%s", python(t, "drop.py", raw, l.path("streak"), l.path("reference")))
+	await(t, 120*time.Second, "three shots done", func() bool {
+		return count(l.shots(t), queue.StateDone) == len(packets)
+	})
+	if code, body := get(t, page+"metrics"); code != 200 {
+		t.Errorf("metrics = %d", code)
+	} else {
+		checkMetrics(t, body)
+	}
+	stop()
+	for i, p := range packets {
+		dir := l.path("streak", fmt.Sprintf("S_20260314T0900%02d.250000.shot", i))
+		compare(t, dir, p, rig.Default().UmPerPx)
+		t.Logf("%s", python(t, "open.py", dir))
+	}
+	octave(t, l.path("streak", "S_20260314T090000.250000.shot", "cube.nxs"))
+}
+
+func compare(t *testing.T, dir string, p packet, umPerPx float64) {
+	t.Helper()
+	b, err := os.ReadFile(filepath.Join(dir, "metrics.json"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	var m struct {
+		Quantities map[string]struct{ Value float64 }
+		Verdict    struct{ Grade string }
+	}
+	if err := json.Unmarshal(b, &m); err != nil {
+		t.Fatal(err)
+	}
+	speed := math.Hypot(p.vx, p.vy)
+	for _, c := range []struct {
+		name       string
+		want, part float64
+	}{
+		{"speed", speed, speedWithin},
+		{"speed_scene", speed * umPerPx * 1e6, speedWithin},
+		{"fwhm", fwhmPerSigma * p.sigma, widthWithin},
+		{"total_light", p.total, lightWithin},
+	} {
+		got := m.Quantities[c.name].Value
+		t.Logf("%s %s: %.5g, put in %.5g (%+.2f %%)", filepath.Base(dir), c.name, got, c.want, 100*(got/c.want-1))
+		if !(math.Abs(got/c.want-1) <= c.part) {
+			t.Errorf("%s = %g, want %g within %g %%", c.name, got, c.want, 100*c.part)
+		}
+	}
+	// The peak may be off by a tenth of a frame (0.8 ps).
+	if got := m.Quantities["peak_time"].Value; math.Abs(got-p.t0) > 0.3 {
+		t.Errorf("peak_time = %g ps, want %g", got, p.t0)
+	}
+	if m.Verdict.Grade != "good" {
+		t.Errorf("verdict %q of a clean shot", m.Verdict.Grade)
+	}
+}
+
+// checkMetrics passes the scraped text to Prometheus' own checker.
+func checkMetrics(t *testing.T, text string) {
+	t.Helper()
+	cmd := exec.Command("promtool", "check", "metrics")
+	in, err := cmd.StdinPipe()
+	if err != nil {
+		t.Fatal(err)
+	}
+	go func() {
+		defer in.Close()
+		_, _ = in.Write([]byte(text))
+	}()
+	out, err := cmd.CombinedOutput()
+	if err != nil {
+		t.Errorf("promtool check metrics (Debian package prometheus): %v\n%s", err, out)
+	}
+}
+
+// octave opens the cube with GNU Octave.
+func octave(t *testing.T, file string) {
+	t.Helper()
+	script := fmt.Sprintf("s = load('%s'); c = s.entry.data.counts; t = s.entry.data.time; printf('%%d %%g\\n', numel(t), sum(c(:)));", file)
+	out, err := exec.Command("octave", "--no-gui", "--quiet", "--eval", script).CombinedOutput()
+	if err != nil {
+		t.Fatalf("octave (Debian package octave): %v\n%s", err, out)
+	}
+	var n int
+	var sum float64
+	if _, err := fmt.Sscan(string(out), &n, &sum); err != nil || n < 16 || !(sum > 50000) {
+		t.Errorf("octave read %q: %v", out, err)
+	}
+}
