@@ -3,6 +3,7 @@ package watch
 import (
 	"context"
 	"errors"
+	"fmt"
 	"io/fs"
 	"os"
 	"path/filepath"
@@ -22,6 +23,8 @@ type share struct {
 	tree
 	hang chan struct{} // nil: answers; else every call waits for its close
 	fail string        // this sub-folder cannot be listed
+
+	asked, listings *atomic.Int32 // calls, if set
 }
 
 func (s *share) wait() {
@@ -32,11 +35,17 @@ func (s *share) wait() {
 
 func (s *share) Lstat(rel string) (fs.FileInfo, error) {
 	s.wait()
+	if s.asked != nil {
+		s.asked.Add(1)
+	}
 	return s.tree.Lstat(rel)
 }
 
 func (s *share) ReadDir(dir string, each func(fs.DirEntry)) error {
 	s.wait()
+	if s.listings != nil {
+		s.listings.Add(1)
+	}
 	if s.fail != "" && dir == s.fail {
 		return fs.ErrPermission
 	}
@@ -74,29 +83,71 @@ func TestHungShare(t *testing.T) {
 	r.until("ok", func(s State) bool { return s.Condition == OK && s.Err == nil })
 }
 
-// TestMissingFolderIsLeftInPeace has an unsettled file when the folder goes:
-// its appointments must not keep the disk busy.
+// TestMissingFolderIsLeftInPeace has notifications and unsettled files while
+// the folder cannot be opened: they must not keep the disk busy.
 func TestMissingFolderIsLeftInPeace(t *testing.T) {
-	dir := mkdir(t, t.TempDir(), "drop")
+	dir := t.TempDir()
 	write(t, filepath.Join(dir, "a.tif"), 0) // empty: stays unsettled
 	var opened atomic.Int32
+	var gone atomic.Bool
 	o := fast(dir)
 	o.Rescan = time.Hour
 	r := start(t, o, func(w *Watcher) {
 		w.open = func(folder string) (tree, error) {
 			opened.Add(1)
+			if gone.Load() {
+				return nil, fs.ErrNotExist
+			}
 			return openRoot(folder)
 		}
 	})
 	r.until("followed", func(s State) bool { return s.Unsettled == 1 })
-	if err := os.RemoveAll(dir); err != nil {
-		t.Fatal(err)
-	}
+	gone.Store(true)
+	write(t, filepath.Join(dir, "b.tif"), 10)
 	r.until("missing", func(s State) bool { return s.Condition == Missing })
 	before := opened.Load()
 	time.Sleep(2 * firstRetry)
 	if n := opened.Load() - before; n > 3 {
 		t.Errorf("the folder was tried %d times in %v", n, 2*firstRetry)
+	}
+	gone.Store(false)
+	r.want("b.tif", 10)
+}
+
+// TestSettledFilesAreNotAskedFor counts questions about sizes: with every
+// file known, only the trickle is left.
+func TestSettledFilesAreNotAskedFor(t *testing.T) {
+	const n = 3 * trickle
+	dir := t.TempDir()
+	for i := range n {
+		write(t, filepath.Join(dir, fmt.Sprintf("%d.tif", i)), 1)
+	}
+	o := fast(dir)
+	var recalled atomic.Int32
+	o.Known = func(rel string) (int64, time.Time, bool) {
+		recalled.Add(1)
+		info, err := os.Stat(filepath.Join(dir, rel))
+		if err != nil {
+			return 0, time.Time{}, false
+		}
+		return info.Size(), info.ModTime(), true
+	}
+	var asked, listings atomic.Int32
+	r := start(t, o, deafen, func(w *Watcher) {
+		w.open = func(folder string) (tree, error) {
+			disk, err := openRoot(folder)
+			return &share{tree: disk, asked: &asked, listings: &listings}, err
+		}
+	})
+	for range 4 {
+		r.scans()
+	}
+	r.stop()
+	if k := recalled.Load(); k != n {
+		t.Errorf("Known was asked %d times for %d files", k, n)
+	}
+	if a, l := asked.Load(), listings.Load(); a > l*trickle || a < trickle {
+		t.Errorf("%d questions after %d listings, want %d for each", a, l, trickle)
 	}
 }
 

@@ -302,6 +302,27 @@ func TestLinksAreNotFollowed(t *testing.T) {
 	}
 }
 
+// TestExchangedFolder opens another folder than the one that os.Root sees,
+// as after an exchange between two calls.
+func TestExchangedFolder(t *testing.T) {
+	here, there := t.TempDir(), t.TempDir()
+	disk, err := openRoot(here)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer disk.Close()
+	for dir, ok := range map[string]bool{here: true, there: false} {
+		f, err := os.Open(dir)
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer f.Close()
+		if err := disk.(root).inside(f, "."); (err == nil) != ok {
+			t.Errorf("%s: %v", dir, err)
+		}
+	}
+}
+
 func TestAccept(t *testing.T) {
 	dir := t.TempDir()
 	o := fast(dir)
