@@ -24,8 +24,8 @@ const (
 	farewell = 2 * time.Second
 )
 
-// session is one run; Run's goroutine owns it.
-type session struct {
+// run is one call of Run; Run's goroutine owns it.
+type run struct {
 	w      *Watcher
 	ears   *ears
 	pulse  *pulse
@@ -59,7 +59,7 @@ func (w *Watcher) Run(ctx context.Context, out chan<- File) error {
 		w.runs = false
 		w.mu.Unlock()
 	}()
-	s := &session{
+	s := &run{
 		w: w, pulse: &pulse{start: time.Now()}, settle: newSettler(w.o.Quiet, w.o.Longest),
 		queued: map[string]struct{}{}, results: make(chan result, 1), nextScan: time.Now(),
 	}
@@ -72,7 +72,7 @@ func (w *Watcher) Run(ctx context.Context, out chan<- File) error {
 	return nil
 }
 
-func (s *session) loop(ctx context.Context, out chan<- File) {
+func (s *run) loop(ctx context.Context, out chan<- File) {
 	timer := time.NewTimer(0)
 	defer timer.Stop()
 	events, faults := s.ears.events(), s.ears.errors()
@@ -115,7 +115,7 @@ func (s *session) loop(ctx context.Context, out chan<- File) {
 
 // scanSoon brings the next listing forward, but leaves the disk as much time
 // as the last one took.
-func (s *session) scanSoon() {
+func (s *run) scanSoon() {
 	state := s.w.State()
 	soon := state.LastScan.Add(state.ScanTime)
 	if now := time.Now(); soon.Before(now) {
@@ -127,7 +127,7 @@ func (s *session) scanSoon() {
 }
 
 // begin starts the next task if there is one and none is running.
-func (s *session) begin() {
+func (s *run) begin() {
 	if s.busy {
 		return
 	}
@@ -162,7 +162,7 @@ func (s *session) begin() {
 }
 
 // wake is when something is to be done even if nothing happens.
-func (s *session) wake() time.Time {
+func (s *run) wake() time.Time {
 	if s.busy {
 		return time.Now().Add(s.w.o.Stuck / 4)
 	}
@@ -174,7 +174,7 @@ func (s *session) wake() time.Time {
 }
 
 // checkStuck says stuck if no disk call returned for too long.
-func (s *session) checkStuck() {
+func (s *run) checkStuck() {
 	if !s.busy {
 		return
 	}
@@ -189,7 +189,7 @@ func (s *session) checkStuck() {
 }
 
 // leave waits a little for the running task.
-func (s *session) leave() {
+func (s *run) leave() {
 	if !s.busy {
 		return
 	}
@@ -201,7 +201,7 @@ func (s *session) leave() {
 }
 
 // hint takes up a notification.
-func (s *session) hint(e fsnotify.Event) {
+func (s *run) hint(e fsnotify.Event) {
 	rel, ok := relative(s.w.o.Folder, e.Name)
 	switch {
 	case !ok || rel == "." || hidden(rel):
@@ -215,7 +215,7 @@ func (s *session) hint(e fsnotify.Event) {
 }
 
 // ask queues a name for a look.
-func (s *session) ask(rel string) {
+func (s *run) ask(rel string) {
 	if _, ok := s.queued[rel]; !ok {
 		s.queued[rel] = struct{}{}
 		s.fresh = append(s.fresh, rel)
@@ -223,7 +223,7 @@ func (s *session) ask(rel string) {
 }
 
 // take uses the result of a task.
-func (s *session) take(ctx context.Context, r result) {
+func (s *run) take(ctx context.Context, r result) {
 	if r.err != nil {
 		s.failed(r)
 		return
@@ -251,7 +251,7 @@ func (s *session) take(ctx context.Context, r result) {
 }
 
 // scanned closes a full listing.
-func (s *session) scanned(r result) {
+func (s *run) scanned(r result) {
 	took := r.ended.Sub(r.begun)
 	s.misses = 0
 	s.nextScan = r.ended.Add(max(s.w.o.Rescan, took))
@@ -289,7 +289,7 @@ func (s *session) scanned(r result) {
 
 // admit takes up a listed name: a new one is looked at, unless an earlier
 // run has settled it.
-func (s *session) admit(rel string) {
+func (s *run) admit(rel string) {
 	if s.settle.knows(rel) || s.recall(rel) {
 		return
 	}
@@ -297,7 +297,7 @@ func (s *session) admit(rel string) {
 }
 
 // recall asks whether an earlier run has settled a file.
-func (s *session) recall(rel string) bool {
+func (s *run) recall(rel string) bool {
 	size, mod, ok := s.w.o.Known(rel)
 	if ok {
 		s.settle.remember(rel, content{size, mod})
@@ -306,7 +306,7 @@ func (s *session) recall(rel string) bool {
 }
 
 // look uses what the disk said about one name.
-func (s *session) look(l look) {
+func (s *run) look(l look) {
 	switch {
 	case errors.Is(l.err, fs.ErrNotExist):
 		s.settle.vanish(l.rel)
@@ -334,7 +334,7 @@ func (s *session) look(l look) {
 }
 
 // failed notes that the folder could not be read and when to try again.
-func (s *session) failed(r result) {
+func (s *run) failed(r result) {
 	for _, rel := range r.names {
 		s.settle.retry(rel, r.ended)
 		if s.settle.pending[rel] == nil {
