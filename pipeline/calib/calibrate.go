@@ -156,9 +156,14 @@ func (c *calibration) code() error {
 		c.b.Code[i] = float32(v)
 	}
 	a := &c.b.Streak
-	a.BlurX = Quantity{f.sigma[0], f.error[0], "px", f.method[0]}
-	a.BlurY = Quantity{f.sigma[1], f.error[1], "px", f.method[1]}
-	a.OpticalX, a.OpticalY = a.BlurX, a.BlurY
+	a.OpticalX = Quantity{f.sigma[0], f.error[0], "px", f.method[0]}
+	a.OpticalY = Quantity{f.sigma[1], f.error[1], "px", f.method[1]}
+	a.BlurX, a.BlurY = a.OpticalX, a.OpticalY
+	if f.model != f.sigma {
+		const less = "; less the box that a code off the pixel grid adds by its average over pixels"
+		a.BlurX.Value, a.BlurX.Method = f.model[0], f.method[0]+less
+		a.BlurY.Value, a.BlurY.Method = f.model[1], f.method[1]+less
+	}
 	a.Floor = min(math.Hypot(f.floor, c.r.Streak.FlatNoise), floorMost)
 	return nil
 }
@@ -177,7 +182,7 @@ func (c *calibration) register() error {
 	if err != nil {
 		return err
 	}
-	sigma := [2]float64{b.Streak.BlurX.Value, b.Streak.BlurY.Value}
+	sigma := [2]float64{b.Streak.OpticalX.Value, b.Streak.OpticalY.Value}
 	in := s.crop(b.Window)
 	f, warn, err := register(c.ctx, in, r, sigma)
 	if err != nil {
@@ -199,7 +204,7 @@ func (c *calibration) register() error {
 
 func (c *calibration) ratio(target, reference image, sst, rst *stack) error {
 	b := c.b
-	inset := min(int(math.Ceil(3*max(b.Streak.BlurX.Value, b.Streak.BlurY.Value)+
+	inset := min(int(math.Ceil(3*max(b.Streak.OpticalX.Value, b.Streak.OpticalY.Value)+
 		3*max(b.Reference.OpticalX.Value, b.Reference.OpticalY.Value)))+1, b.Window.W/4, b.Window.H/4)
 	find := func(s, r image, ss, rs *stack, name string) Quantity {
 		q, e, n := flux(s, r, b.Registration, inset)

@@ -20,6 +20,7 @@ type edgeFit struct {
 	sigma, err float64 // px
 	chi2       float64 // per degree of freedom
 	each       [2]float64
+	side       [2]float64 // where the sides lie against whole pixels, px, inwards
 	ok         bool
 }
 
@@ -61,6 +62,9 @@ func fitEdges(open image, w Window, alongX bool) edgeFit {
 	for i, bs := range sides {
 		if len(bs) > 0 {
 			f.each[i], _ = minimise(cost(bs), 0.02, maxBlur, 1e-3)
+			for _, b := range bs {
+				f.side[i] += b.place(s) / float64(len(bs))
+			}
 		}
 	}
 	f.ok = finite(f.sigma, f.err) && f.sigma < 0.95*maxBlur
@@ -130,7 +134,18 @@ const flatDoubt = 0.002
 // cost is χ² of the profile for a blur σ, with the step's place, height,
 // slope inside and the level outside fitted.
 func (b *band) cost(sigma float64) float64 {
-	f := func(pos float64) float64 {
+	_, c := b.fit(sigma)
+	return c
+}
+
+// place is where the step lies.
+func (b *band) place(sigma float64) float64 {
+	p, _ := b.fit(sigma)
+	return p
+}
+
+func (b *band) fit(sigma float64) (place, cost float64) {
+	return minimise(func(pos float64) float64 {
 		eq := newNormal(3)
 		for i, d := range b.d {
 			e := edgeSpread(d-pos, sigma)
@@ -141,7 +156,5 @@ func (b *band) cost(sigma float64) float64 {
 			return math.Inf(1)
 		}
 		return eq.chi2(c)
-	}
-	_, c := minimise(f, -1, 1, 1e-4)
-	return c
+	}, -1, 1, 1e-4)
 }

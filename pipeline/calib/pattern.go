@@ -3,19 +3,22 @@ package calib
 import (
 	"fmt"
 	"math"
+
+	"gonum.org/v1/gonum/mat"
 )
 
 // CodeFit is how the code was found.
 type CodeFit struct {
 	Low, High      float64 // transmission of closed and open elements
-	PitchX, PitchY float64 // px, from the correlation of neighbours
+	PitchX, PitchY float64 // px, side of an element
 	TwoLevel       bool    // the pattern of two levels explains the frames
 	Excess         float64 // what it leaves, rms over rms signal, noise taken off
 	Chi2           float64 // per pixel
 	Edge, Inner    [2]Quantity
 
 	code         plane
-	sigma, error [2]float64 // x, y
+	sigma, error [2]float64 // x, y, of the optics
+	model        [2]float64 // for the forward model
 	method       [2]string
 	measured     plane // coded over open, window
 	floor        float64
@@ -56,7 +59,9 @@ func fitCode(coded, open image, w Window) (*CodeFit, []string, error) {
 	}
 	pad := int(math.Ceil(4*max(start[0], start[1]))) + 2
 	m := newCodeModel(coded, w, light, pad)
-	b, inner := m.search(start, f)
+	b := newElements(m)
+	b.fillPlain()
+	inner := b.search(start, [2]edgeFit{ex, ey}, f)
 	warn := f.choose(ex, ey, inner)
 	f.finish(m, b)
 	return f, warn, nil
@@ -109,54 +114,76 @@ func (f *CodeFit) judge() error {
 	return nil
 }
 
-// search alternates between the pattern and the blur that fit best.
-func (m *codeModel) search(start [2]float64, f *CodeFit) (*twoLevel, edgeFit2) {
-	s := start
-	var b *twoLevel
-	cost := func(sx, sy float64) float64 {
-		_, c := m.residual(b.values(), pixelKernel(sx), pixelKernel(sy))
-		return c
-	}
+// search finds the grid of elements, the two-level pattern on it, and the
+// blur and grid that fit best, in turns.
+func (b *elements) search(start [2]float64, edges [2]edgeFit, f *CodeFit) edgeFit2 {
+	b.sigma = start
+	b.chooseGrids(b.findGrids(true, start[0], edges[0].place(b.w)), b.findGrids(false, start[1], edges[1].place(b.h)))
+	cost := func() float64 { return b.misfit(b.matrices()) }
 	for round := range 6 {
-		b = m.pattern(b, s[0], s[1])
-		was := s
-		for range 2 {
-			s[0], _ = minimise(func(x float64) float64 { return cost(x, s[1]) }, max(0.02, s[0]-0.4), s[0]+0.4, 1e-4)
-			s[1], _ = minimise(func(y float64) float64 { return cost(s[0], y) }, max(0.02, s[1]-0.4), s[1]+0.4, 1e-4)
+		p, q := b.matrices()
+		if !b.binary(p, q) {
+			break
 		}
-		if round > 0 && math.Hypot(s[0]-was[0], s[1]-was[1]) < 1e-3 {
+		b.fill(p, q)
+		was := b.sigma
+		for range 2 {
+			b.tune(&b.sigma[0], max(0.02, b.sigma[0]-0.4), b.sigma[0]+0.4, cost)
+			b.tune(&b.sigma[1], max(0.02, b.sigma[1]-0.4), b.sigma[1]+0.4, cost)
+			for _, g := range []*grid{&b.gx, &b.gy} {
+				if g.pitch != math.Round(g.pitch) || g.from != math.Round(g.from) {
+					b.tune(&g.from, g.from-0.2, g.from+0.2, cost)
+				}
+			}
+		}
+		if round > 0 && math.Hypot(b.sigma[0]-was[0], b.sigma[1]-was[1]) < 1e-3 {
 			break
 		}
 	}
-	b = m.pattern(b, s[0], s[1])
-	chi2 := cost(s[0], s[1])
-	f.Chi2 = chi2 / float64(max(m.points, 1))
-	f.Excess = m.excess(b.values(), pixelKernel(s[0]), pixelKernel(s[1]))
+	b.binary(b.matrices())
+	c := cost()
+	f.Chi2 = c / b.noise
+	f.Excess = b.excess()
 	f.TwoLevel = f.Excess < twoLevelLimit
-	wide := math.Sqrt(max(1, f.Chi2))
-	return b, edgeFit2{s, [2]float64{
-		wide * curvatureSigma(func(x float64) float64 { return cost(x, s[1]) }, s[0], 0.02),
-		wide * curvatureSigma(func(y float64) float64 { return cost(s[0], y) }, s[1], 0.02)}}
+	out := edgeFit2{sigma: b.sigma}
+	unit := max(b.noise, c) / b.points // one unit of χ²
+	for i := range 2 {
+		at := b.sigma[i]
+		out.err[i] = curvatureSigma(func(s float64) float64 {
+			b.sigma[i] = s
+			v := cost() / unit
+			b.sigma[i] = at
+			return v
+		}, at, 0.02)
+	}
+	return out
+}
+
+// tune moves one parameter to the minimum of cost.
+func (b *elements) tune(p *float64, lo, hi float64, cost func() float64) {
+	*p, _ = minimise(func(v float64) float64 { *p = v; return cost() }, lo, hi, 1e-4)
+}
+
+// sideSlack is how far a side may lie from a whole pixel and still be taken
+// to lie on it, px.
+const sideSlack = 0.02
+
+// place gives the window's two sides in pixels from its first edge.
+func (e edgeFit) place(n int) [2]float64 {
+	s := [2]float64{0, float64(n)}
+	if !e.ok {
+		return s
+	}
+	for i, d := range e.side {
+		if math.Abs(d) > sideSlack && math.Abs(d) < 1 {
+			s[i] += d * float64(1-2*i) // positive d is inwards
+		}
+	}
+	return s
 }
 
 // edgeFit2 is a blur found for both axes at once.
 type edgeFit2 struct{ sigma, err [2]float64 }
-
-// excess is the rms residual beyond the noise over the rms signal.
-func (m *codeModel) excess(c []float64, kx, ky []float64) float64 {
-	p := m.image(c, kx, ky)
-	var res, noise, signal float64
-	for i, w := range m.weight {
-		if w > 0 {
-			e := p.v[i] - m.d.v[i]
-			doubt := modelDoubt * m.d.v[i]
-			res += e * e
-			noise += 1/w - doubt*doubt
-			signal += m.d.v[i] * m.d.v[i]
-		}
-	}
-	return math.Sqrt(max(res-noise, 0) / signal)
-}
 
 // choose combines the two estimates of the blur by their uncertainties, if
 // the pattern is believed, and says what was done.
@@ -195,55 +222,111 @@ func (f *CodeFit) choose(ex, ey edgeFit, inner edgeFit2) (warn []string) {
 // finish finds the code for the chosen blur: the measured pixels with the
 // two-level pattern as prior, whose spread is what the pattern left
 // unexplained.
-func (f *CodeFit) finish(m *codeModel, b *twoLevel) {
-	kx, ky := pixelKernel(f.sigma[0]), pixelKernel(f.sigma[1])
-	b = m.pattern(b, f.sigma[0], f.sigma[1])
-	f.Low, f.High = b.lo, b.hi
-	values := b.values()
-	var signal, light float64
+//
+// Equation (1) takes the code as constant over pixels. Where its elements do
+// not end on pixel sides, the average over pixels already blurs it, by up to
+// two pixel boxes, so that K needs a smaller σ: the model's blur is the one
+// that explains the frames best with the averaged code. On whole pixels it is
+// the blur of the optics.
+func (f *CodeFit) finish(m *codeModel, b *elements) {
+	f.model = f.sigma
+	var values []float64
+	spread := 0.3
+	if f.TwoLevel {
+		b.sigma = f.sigma
+		b.binary(b.matrices())
+		f.Low, f.High = b.lo, b.hi
+		f.PitchX, f.PitchY = b.gx.pitch, b.gy.pitch
+		values = b.values()
+		if !b.gx.whole() || !b.gy.whole() {
+			m.tune(values, &f.model)
+		}
+		spread = m.spread(values, f.model)
+	} else {
+		for i, s := range f.sigma {
+			f.model[i] = math.Sqrt(max(s*s-2*pixelVar, 0))
+		}
+		values = clamped(f.measured)
+		f.Low, f.High = levels(values)
+	}
+	kx, ky := pixelKernel(f.model[0]), pixelKernel(f.model[1])
+	c := m.restore(values, 1/(spread*spread), kx, ky, 300)
+	f.floor = m.excess(c, kx, ky)
+	f.code = plane{m.w, m.h, c}
+}
+
+// whole reports whether all elements end on pixel sides.
+func (g grid) whole() bool {
+	return g.pitch == math.Round(g.pitch) && g.from == math.Round(g.from) &&
+		g.side[0] == math.Round(g.side[0]) && g.side[1] == math.Round(g.side[1])
+}
+
+// tune finds the blur for a given code.
+func (m *codeModel) tune(c []float64, s *[2]float64) {
+	cost := func() float64 {
+		_, chi2 := m.residual(c, pixelKernel(s[0]), pixelKernel(s[1]))
+		return chi2
+	}
+	for range 3 {
+		for i := range s {
+			s[i], _ = minimise(func(v float64) float64 { s[i] = v; return cost() }, 0, s[i]+0.3, 1e-4)
+		}
+	}
+}
+
+// spread is the standard deviation about c that the code needs to explain the
+// frames.
+func (m *codeModel) spread(c []float64, sigma [2]float64) float64 {
+	kx, ky := pixelKernel(sigma[0]), pixelKernel(sigma[1])
+	var signal, light, gain float64
 	for _, v := range m.d.v {
 		signal += v * v
 	}
 	for _, l := range m.light.v {
 		light += l * l
 	}
-	gain := 0.0 // variance of the image of one pixel of unit spread
-	for _, a := range squares(kx) {
-		for _, c := range squares(ky) {
-			gain += a * c
+	for _, a := range squares(kx) { // variance of the image of one pixel of unit spread
+		for _, b := range squares(ky) {
+			gain += a * b
 		}
 	}
-	excess := m.excess(values, kx, ky)
-	spread := max(excess*math.Sqrt(signal/(light*gain)), 1e-3)
-	spread = min(spread, 0.5)
-	c := m.restore(values, 1/(spread*spread), kx, ky, 300)
-	f.floor = m.excess(c, kx, ky)
-	f.code = plane{m.w, m.h, c}
-	f.PitchX, f.PitchY = pitch(f.code)
+	return max(1e-3, min(0.5, m.excess(c, kx, ky)*math.Sqrt(signal/(light*gain))))
 }
 
-// pitch is the element size for a random pattern: neighbours at distance 1
-// correlate by 1 − 1/p.
-func pitch(c plane) (px, py float64) {
-	var mean, vari, cx, cy, nx, ny float64
-	for _, v := range c.v {
-		mean += v / float64(len(c.v))
-	}
-	for y := range c.h {
-		for x := range c.w {
-			v := c.at(x, y) - mean
-			vari += v * v
-			if x > 0 {
-				cx += v * (c.at(x-1, y) - mean)
-				nx++
-			}
-			if y > 0 {
-				cy += v * (c.at(x, y-1) - mean)
-				ny++
-			}
+func clamped(p plane) []float64 {
+	v := make([]float64, len(p.v))
+	for i, x := range p.v {
+		if v[i] = max(0, min(1, x)); math.IsNaN(x) {
+			v[i] = 0.5
 		}
 	}
-	vari /= float64(len(c.v))
-	p := func(r float64) float64 { return 1 / max(1-r, 1e-3) }
-	return p(cx / nx / vari), p(cy / ny / vari)
+	return v
+}
+
+// values is the code averaged over the window's pixels.
+func (b *elements) values() []float64 {
+	var t, c mat.Dense
+	t.Mul(b.gy.cover(b.h, 0), b.e)
+	c.Mul(&t, b.gx.cover(b.w, 0).T())
+	v := c.RawMatrix().Data
+	for i := range v {
+		v[i] = max(0, min(1, v[i]))
+	}
+	return v
+}
+
+// excess is the rms residual of (1) beyond the noise over the rms signal.
+func (m *codeModel) excess(c []float64, kx, ky []float64) float64 {
+	p := m.image(c, kx, ky)
+	var res, noise, signal float64
+	for i, w := range m.weight {
+		if w > 0 {
+			e := p.v[i] - m.d.v[i]
+			doubt := modelDoubt * m.d.v[i]
+			res += e * e
+			noise += 1/w - doubt*doubt
+			signal += m.d.v[i] * m.d.v[i]
+		}
+	}
+	return math.Sqrt(max(res-noise, 0) / signal)
 }

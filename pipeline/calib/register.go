@@ -125,7 +125,7 @@ func (g *registrar) aligner(bs, br covariance, stride int) *aligner {
 		cx: float64(g.s.w-1)/2 + float64(g.inset), cy: float64(g.s.h-1)/2 + float64(g.inset)}
 	a.l = max(a.cx, a.cy, 1)
 	a.use = make([]bool, len(g.s.ok))
-	edge := min(int(math.Ceil(2*math.Sqrt(max(bs.xx, bs.yy)))), g.s.w/5, g.s.h/5)
+	edge := min(int(math.Ceil(3*math.Sqrt(max(bs.xx, bs.yy)))), g.s.w/5, g.s.h/5)
 	for y := edge; y < g.s.h-edge; y++ {
 		for x := edge; x < g.s.w-edge; x++ {
 			a.use[y*g.s.w+x] = g.s.ok[y*g.s.w+x]
@@ -293,6 +293,9 @@ func (g *registrar) blur(a *aligner, f fit, out *RegisterFit) {
 	j := a.linearPart(f.p)
 	br := g.streak.through(j)
 	nr := g.noise[1] * g.wr.noiseGain(br)
+	// Neighbouring pixels share their noise over the area of the blur.
+	_, now, _ := g.equal(j)
+	free := a.sums(f.p).n / max(1, 4*math.Pi*math.Sqrt(max(now.xx*now.yy-now.xy*now.xy, 0)))
 	cost := func(sx, sy float64) float64 {
 		ref := covariance{sx*sx + pixelVar, 0, sy*sy + pixelVar}
 		bs := ref.through(inverse2(j))
@@ -305,7 +308,6 @@ func (g *registrar) blur(a *aligner, f fit, out *RegisterFit) {
 		if !(css > 0 && crr > 0) {
 			return math.Inf(1)
 		}
-		free := m.n / max(1, 4*math.Pi*math.Sqrt(max(bs.xx*bs.yy-bs.xy*bs.xy, 0)))
 		return free * math.Log(max(1-csr*csr/(css*crr), 0)+1e-7)
 	}
 	s := g.refBlur
