@@ -45,26 +45,27 @@ type Depth struct {
 // included.
 func (r *Reader) QueueDepth(ctx context.Context) (map[Pass]Depth, error) {
 	rows, err := r.db.QueryContext(ctx, `
-		select pass, state = 'running', count(*), min(queued_ns) from work
-		where state in ('queued', 'later', 'failed', 'running') group by 1, 2`)
+		select state, pass, count(*), min(queued_ns) from work
+		where state in ('queued', 'later', 'failed', 'running') group by state, pass`)
 	if err != nil {
 		return nil, fmt.Errorf("measure the queue: %w", err)
 	}
 	defer rows.Close()
 	out := map[Pass]Depth{Quick: {}, Full: {}, Spread: {}}
 	for rows.Next() {
+		var state string
 		var p Pass
-		var running bool
 		var n int
 		var oldest int64
-		if err := rows.Scan(&p, &running, &n, &oldest); err != nil {
+		if err := rows.Scan(&state, &p, &n, &oldest); err != nil {
 			return nil, fmt.Errorf("measure the queue: %w", err)
 		}
 		d := out[p]
-		if running {
+		if state == workRunning {
 			d.Running = n
 		} else {
-			d.Jobs, d.Oldest = n, max(r.now().Sub(at(oldest)), 0)
+			d.Jobs += n
+			d.Oldest = max(d.Oldest, r.now().Sub(at(oldest)))
 		}
 		out[p] = d
 	}
