@@ -50,7 +50,7 @@ func chromium(t *testing.T) (context.Context, func() []string) {
 		"disable-background-networking", "disable-component-update", "disable-sync", "disable-dev-shm-usage", "hide-scrollbars"} {
 		opts = append(opts, chromedp.Flag(flag, true))
 	}
-	ctx, stop := context.WithTimeout(t.Context(), 90*time.Second)
+	ctx, stop := context.WithTimeout(t.Context(), 4*time.Minute)
 	t.Cleanup(stop)
 	ctx, cancel := chromedp.NewExecAllocator(ctx, opts...)
 	t.Cleanup(cancel)
@@ -119,7 +119,7 @@ func eval[T any](t *testing.T, ctx context.Context, js string) T {
 // wait polls a condition in the page.
 func wait(t *testing.T, ctx context.Context, js string) {
 	t.Helper()
-	if _, err := chromedp.Run(ctx, chromedp.Poll[bool](js, chromedp.WithPollingTimeout(15*time.Second))); err != nil {
+	if _, err := chromedp.Run(ctx, chromedp.Poll[bool](js, chromedp.WithPollingTimeout(time.Minute))); err != nil {
 		t.Fatalf("never came true: %s: %v", js, err)
 	}
 }
@@ -168,6 +168,7 @@ func TestBrowserNotices(t *testing.T) {
 		{`document.body.append(Object.assign(document.createElement("script"), {textContent: "1"}))`, "script-src"},
 		{`document.body.append(Object.assign(new Image(), {src: "https://example.org/x.png"}))`, "img-src"},
 		{`document.body.append(Object.assign(new Image(), {src: "/shot/1/file/none.png"}))`, "404"},
+		{`console.log("made up")`, "console"},
 		{`setTimeout(() => { throw new Error("made up") })`, "exception"},
 	} {
 		do(t, ctx, chromedp.Evaluate[chromedp.Void](c.js))
@@ -183,6 +184,22 @@ func TestBrowserNotices(t *testing.T) {
 		if !seen() {
 			t.Errorf("%s: no complaint about %s in %q", c.js, c.want, faults())
 		}
+	}
+}
+
+// TestBrowserContrastCheckBites adds a text that is hard to read.
+func TestBrowserContrastCheckBites(t *testing.T) {
+	ctx := browser(t)
+	do(t, ctx, chromedp.Navigate(running(t, newFake())+"/"))
+	do(t, ctx, chromedp.Evaluate[chromedp.Void](`(() => {
+		const p = document.createElement("p");
+		p.textContent = "faint";
+		p.style.color = "#777";
+		p.style.backgroundColor = "#eee"; // 3.86
+		document.body.append(p);
+	})()`))
+	if got := eval[[]string](t, ctx, contrastJS); len(got) != 1 || !strings.HasPrefix(got[0], "3.86 ") {
+		t.Errorf("found %q, want the one faint text with its contrast of 3.86", got)
 	}
 }
 
@@ -276,6 +293,35 @@ func TestBrowserLostService(t *testing.T) {
 	}
 }
 
+// contrastJS lists the texts whose contrast to the ground they stand on is
+// below 4.5, by the definitions of relative luminance and contrast ratio in
+// WCAG 2.2, success criterion 1.4.3.
+const contrastJS = `(() => {
+	const rgba = (c) => c.match(/[\d.]+/g).map(Number);
+	const lum = (c) => {
+		const [r, g, b] = c.map((v) => v / 255).map((v) => v <= 0.04045 ? v / 12.92 : ((v + 0.055) / 1.055) ** 2.4);
+		return 0.2126 * r + 0.7152 * g + 0.0722 * b;
+	};
+	const ground = (e) => {
+		for (; e; e = e.parentElement) {
+			const c = rgba(getComputedStyle(e).backgroundColor);
+			if (c.length === 3 || c[3] === 1) return c.slice(0, 3);
+		}
+		return [255, 255, 255];
+	};
+	const out = [];
+	let seen = 0;
+	for (const e of document.body.querySelectorAll("*")) {
+		if (![...e.childNodes].some((n) => n.nodeType === 3 && n.data.trim()) || !e.checkVisibility()) continue;
+		seen++;
+		const pair = [lum(rgba(getComputedStyle(e).color).slice(0, 3)), lum(ground(e))].sort((a, b) => b - a);
+		const ratio = (pair[0] + 0.05) / (pair[1] + 0.05);
+		if (!(ratio >= 4.5)) out.push(ratio.toFixed(2) + " " + e.outerHTML.slice(0, 80));
+	}
+	if (seen < 8) out.push("only " + seen + " texts were looked at");
+	return out;
+})()`
+
 // TestBrowserPictures keeps the pages in range of the widths and schemes they
 // are made for, and leaves screenshots to look at.
 func TestBrowserPictures(t *testing.T) {
@@ -285,7 +331,13 @@ func TestBrowserPictures(t *testing.T) {
 		dir = t.ArtifactDir()
 	}
 	base := running(t, newFake())
-	for _, p := range []struct{ name, path string }{{"now", "/"}, {"shots", "/shots"}, {"shot", "/shot/68"}, {"fault", "/shots?after=p0&text=nothing-has-this-name"}} {
+	full := newFake()
+	full.snap.Queue = Queue{Waiting: 41, Oldest: 19 * time.Minute, Slots: 2, Stopped: "the disk for results is full"}
+	full.snap.Fault = "The table of shots is being rebuilt: numbers of earlier days are missing."
+	empty := newFake()
+	empty.snap = Snapshot{Time: start, Stations: empty.snap.Stations[:1]}
+	for _, p := range []struct{ name, url string }{{"now", base + "/"}, {"shots", base + "/shots"}, {"shot", base + "/shot/68"},
+		{"none", base + "/shots?after=p0&text=nothing-has-this-name"}, {"full", running(t, full) + "/"}, {"empty", running(t, empty) + "/"}} {
 		for _, width := range []int64{390, 1280, 1920} {
 			for _, scheme := range []string{"light", "dark"} {
 				name := fmt.Sprintf("%s-%d-%s.png", p.name, width, scheme)
@@ -297,7 +349,7 @@ func TestBrowserPictures(t *testing.T) {
 					Features: []*emulation.MediaFeature{{Name: "prefers-color-scheme", Value: scheme}}}); err != nil {
 					t.Fatal(err)
 				}
-				do(t, ctx, chromedp.EmulateViewport(width, height), chromedp.Navigate(base+p.path))
+				do(t, ctx, chromedp.EmulateViewport(width, height), chromedp.Navigate(p.url))
 				do(t, ctx, chromedp.Evaluate[chromedp.Void](`document.querySelectorAll("img").forEach((i) => { i.loading = "eager"; })`))
 				wait(t, ctx, `[...document.images].every((i) => i.complete)`)
 				if broken := eval[int](t, ctx, `[...document.images].filter((i) => !i.naturalWidth).length`); broken > 0 {
@@ -308,6 +360,9 @@ func TestBrowserPictures(t *testing.T) {
 				}
 				if small := eval[float64](t, ctx, `Math.min(...[...document.querySelectorAll("main *")].filter((e) => e.textContent.trim() && e.checkVisibility()).map((e) => parseFloat(getComputedStyle(e).fontSize)))`); small < 13 {
 					t.Errorf("%s: text of %.1f px, want at least 13", name, small)
+				}
+				for _, faint := range eval[[]string](t, ctx, contrastJS) {
+					t.Errorf("%s: contrast below 4.5: %s", name, faint)
 				}
 				b, err := chromedp.Run(ctx, chromedp.FullScreenshot(100))
 				if err != nil {

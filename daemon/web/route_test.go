@@ -5,6 +5,7 @@ import (
 	"errors"
 	"net/http"
 	"net/http/httptest"
+	"net/url"
 	"os/exec"
 	"slices"
 	"strings"
@@ -241,6 +242,46 @@ func TestVersion(t *testing.T) {
 	}
 }
 
+// FuzzAddress puts any text into the address: the filter comes back from the
+// address the page makes of it, and nothing reaches the page unescaped.
+func FuzzAddress(f *testing.F) {
+	f.Add("bay-a", "held", "good", "S_2031", "p4")
+	f.Add("<script>", "", "unusable", `"onfocus=alert(1)`, "\x00")
+	s, err := New(Options{Source: newFake(), Registry: prometheus.NewRegistry()})
+	if err != nil {
+		f.Fatal(err)
+	}
+	var plain string // the pages this server shows without any filter
+	for _, u := range []string{"/shots", "/shots?after=p0&text=none", "/shots?state=x", "/shots?verdict=x", "/shots?after=x"} {
+		r := httptest.NewRequest("GET", u, nil)
+		r.Host = "localhost"
+		w := httptest.NewRecorder()
+		s.Handler().ServeHTTP(w, r)
+		plain += w.Body.String()
+	}
+	f.Fuzz(func(t *testing.T, station, state, verdict, text, after string) {
+		in := Filter{Station: station, State: state, Verdict: verdict, Text: strings.TrimSpace(text), After: after}
+		u := shotsURL(in, after)
+		q, err := url.Parse(u)
+		if err != nil {
+			t.Fatalf("%q: %v", u, err)
+		}
+		if got, fault := readFilter(q.Query()); fault == "" && got != in {
+			t.Errorf("%q comes back as %+v, want %+v", u, got, in)
+		}
+		w := get(t, s.Handler(), u)
+		if w.Code != 200 && w.Code != 400 {
+			t.Errorf("GET %q: %d", u, w.Code)
+		}
+		for _, v := range []string{station, state, verdict, text} {
+			// A text that is markup of the page itself proves nothing.
+			if strings.ContainsRune(v, '<') && !strings.Contains(plain, v) && strings.Contains(w.Body.String(), v) {
+				t.Errorf("GET %q shows %q unescaped", u, v)
+			}
+		}
+	})
+}
+
 // TestMetricsLint has the text read by promtool (Debian package prometheus):
 // form, names, units, help texts.
 func TestMetricsLint(t *testing.T) {
@@ -271,5 +312,23 @@ func TestMetricsLint(t *testing.T) {
 	// The check itself must be able to fail.
 	if out, err := check("# TYPE unsheard_bad counter\nunsheard_bad 1\n"); err == nil && out == "" {
 		t.Error("promtool finds nothing wrong with a counter without help and without _total")
+	}
+}
+
+// BenchmarkNow renders the first page from a snapshot at hand.
+func BenchmarkNow(b *testing.B) {
+	s, err := New(Options{Source: newFake(), Registry: prometheus.NewRegistry()})
+	if err != nil {
+		b.Fatal(err)
+	}
+	r := httptest.NewRequest("GET", "/", nil)
+	r.Host = "localhost"
+	b.ReportAllocs()
+	for b.Loop() {
+		w := httptest.NewRecorder()
+		s.Handler().ServeHTTP(w, r)
+		if w.Code != http.StatusOK {
+			b.Fatal(w.Code)
+		}
 	}
 }
