@@ -170,8 +170,9 @@ func sniff(s source) (string, error) {
 	return "", fault(ErrFormat, "its first bytes are % x: neither TIFF, PNG, FITS nor NPY", head)
 }
 
-// open opens a regular file. Anything else is refused before it is opened:
-// opening a pipe could block for ever.
+// open opens a file. A pipe or device is refused before it is opened, which
+// could block for ever. What is merely not regular is let through: so Windows
+// shows files that a cloud folder keeps elsewhere.
 func open(path string) (*os.File, int64, error) {
 	st, err := os.Stat(path)
 	if err != nil {
@@ -180,8 +181,9 @@ func open(path string) (*os.File, int64, error) {
 	if st.IsDir() {
 		return nil, 0, fault(ErrFormat, "it is a folder")
 	}
-	if !st.Mode().IsRegular() {
-		return nil, 0, fault(ErrFormat, "it is not a regular file (%v)", st.Mode().Type())
+	const stuck = os.ModeNamedPipe | os.ModeSocket | os.ModeDevice | os.ModeCharDevice
+	if k := st.Mode().Type(); k&stuck != 0 {
+		return nil, 0, fault(ErrFormat, "it is no file but a pipe, socket or device (%v)", k)
 	}
 	f, err := os.Open(path)
 	if err != nil {

@@ -3,6 +3,7 @@ package frame
 import (
 	"bytes"
 	"math"
+	"runtime/metrics"
 	"strings"
 	"testing"
 	"time"
@@ -24,13 +25,24 @@ func samePixels(f, g *Frame) bool {
 	return true
 }
 
+// allocated is all memory taken since the program started, freed or not.
+func allocated() uint64 {
+	m := []metrics.Sample{{Name: "/gc/heap/allocs:bytes"}}
+	metrics.Read(m)
+	return m[0].Value.Uint64()
+}
+
 // checkDecode decodes b and, if it is a frame, writes it and decodes again.
 func checkDecode(t *testing.T, b []byte) {
+	before := allocated()
 	f, err := decodeBytes(b, fuzzLimits)
 	for _, loc := range []*time.Location{time.UTC, time.FixedZone("x", 3600)} {
 		if int64(len(b)) <= fuzzLimits.MaxBytes {
 			tagTime(newSource(bytes.NewReader(b), int64(len(b)), fuzzLimits), loc)
 		}
+	}
+	if got, most := allocated()-before, uint64(8<<20+64*len(b)); got > most {
+		t.Errorf("took %d bytes of memory for a file of %d, want at most %d", got, len(b), most)
 	}
 	if err != nil {
 		if !strings.Contains(err.Error(), "; ") {

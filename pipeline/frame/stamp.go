@@ -81,6 +81,9 @@ func (s *Stamper) Match(name string) bool {
 
 // Stamp reads the stamp of the frame file at path, whose modification time is
 // mtime. It opens the file only for "tag", and then reads headers only.
+//
+// An error that wraps ErrTruncated, or for "sidecar" fs.ErrNotExist, may go
+// away when the camera program has finished; ErrStamp stays.
 func (s *Stamper) Stamp(path string, mtime time.Time) (Stamp, error) {
 	st := Stamp{Source: s.source}
 	var err error
