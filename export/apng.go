@@ -28,8 +28,14 @@ type animation struct {
 }
 
 func newAnimation(w io.Writer, frames, milli int) *animation {
-	return &animation{w: w, frames: frames, milli: milli, enc: png.Encoder{CompressionLevel: png.BestSpeed}}
+	return &animation{w: w, frames: frames, milli: milli, enc: png.Encoder{CompressionLevel: png.BestSpeed, BufferPool: &scratch{}}}
 }
+
+// scratch hands the encoder of the last image to the next.
+type scratch struct{ b *png.EncoderBuffer }
+
+func (s *scratch) Get() *png.EncoderBuffer  { return s.b }
+func (s *scratch) Put(b *png.EncoderBuffer) { s.b = b }
 
 var errPNG = errors.New("unexpected PNG chunk")
 

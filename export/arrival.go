@@ -84,5 +84,5 @@ func arrival(w io.Writer, r *Result) error {
 		under, over = under || float64(v) < lo, over || float64(v) > hi
 	}
 	cv.bar(image.Rect(x, box.Min.Y+12, x+22, max(box.Max.Y-12, box.Min.Y+180)), m, "time (ps)", under, over)
-	return encoder.Encode(w, cv)
+	return encoder.Encode(w, cv.RGBA)
 }

@@ -45,7 +45,7 @@ func contact(w io.Writer, r *Result) error {
 	x := margin + body.X + 10
 	bottom := head + max(rows*cell.Y-sizeSmall-18, 240)
 	cv.bar(image.Rect(x, head+12, x+22, min(bottom, head+12+420)), m, countLabel, false, clipped)
-	return encoder.Encode(w, cv)
+	return encoder.Encode(w, cv.RGBA)
 }
 
 // countLabel names the unit of a cube's values.

@@ -95,8 +95,7 @@ func report(c *cube.Cube) *measure.Report {
 func planes(n, h, w int) []FramePlane {
 	r := rand.New(rand.NewPCG(1, 2))
 	var out []FramePlane
-	for arm, size := range map[string][2]int{"streak": {w, h + n - 1}, "reference": {w + 6, h + 6}} {
-		f := FramePlane{Arm: arm, W: size[0], H: size[1]}
+	for _, f := range []FramePlane{{Arm: "streak", W: w, H: h + n - 1}, {Arm: "reference", W: w + 6, H: h + 6}} {
 		for i := range f.W * f.H {
 			x, y := float64(i%f.W)/float64(f.W), float64(i/f.W)/float64(f.H)
 			m := 200*math.Exp(-8*(x-.5)*(x-.5)-8*(y-.5)*(y-.5)) + 4
@@ -110,11 +109,7 @@ func planes(n, h, w int) []FramePlane {
 			}
 			f.Measured, f.Model, f.Variance = append(f.Measured, float32(d)), append(f.Model, float32(m)), append(f.Variance, float32(v))
 		}
-		if arm == "streak" {
-			out = append([]FramePlane{f}, out...)
-		} else {
-			out = append(out, f)
-		}
+		out = append(out, f)
 	}
 	return out
 }

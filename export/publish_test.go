@@ -407,3 +407,20 @@ func TestPassing(t *testing.T) {
 		}
 	}
 }
+
+// TestRestore: an old result without a successor goes back into place.
+func TestRestore(t *testing.T) {
+	top := t.TempDir()
+	dir := filepath.Join(top, "a.shot")
+	publishTo(t, dir, pulse(3, 3, 3, "full", "a"), Options{parts: bare})
+	o := Options{}
+	o.fill()
+	if err := os.Rename(dir, newSwap(dir, &o).previous); err != nil {
+		t.Fatal(err)
+	}
+	got, err := Sweep(context.Background(), top, SweepOptions{Older: -1})
+	if err != nil || got != (Swept{Finished: 1}) {
+		t.Errorf("%+v %v", got, err)
+	}
+	whole(t, dir)
+}

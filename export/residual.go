@@ -66,5 +66,5 @@ func residual(w io.Writer, r *Result) error {
 	}
 	top := head + panelTop
 	cv.bar(image.Rect(x, top+14, x+22, top+max(high, 200)-14), m, "(measured − predicted) / σ", under, over)
-	return encoder.Encode(w, cv)
+	return encoder.Encode(w, cv.RGBA)
 }

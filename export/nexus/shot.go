@@ -137,7 +137,7 @@ func axis(name, toward string, n int, step float64, units string) Dataset {
 		v[i] = float64(i) * step
 	}
 	return Dataset{Name: name, Value: v, Attrs: []Attr{
-		{"units", units}, {"long_name", fmt.Sprintf("%s, pixel centre from the window's corner, %s (%s)", name, toward, units)}}}
+		{"units", units}, {"long_name", fmt.Sprintf("%s, pixel centre, from the first one %s (%s)", name, toward, units)}}}
 }
 
 func (s *Shot) process() Group {
