@@ -78,17 +78,17 @@ func spare(name string) int {
 	return 64
 }
 
-// plainTIFF is a TIFF header and directory without pixels.
+// plainTIFF is a TIFF header and directory of LONG tags, filled up to at least
+// 130 bytes.
 func plainTIFF(tags [][2]uint32) []byte {
+	le := binary.LittleEndian
 	b := append([]byte("II*\x00"), 8, 0, 0, 0)
-	b = binary.LittleEndian.AppendUint16(b, uint16(len(tags)))
+	b = le.AppendUint16(b, uint16(len(tags)))
 	for _, t := range tags {
-		b = binary.LittleEndian.AppendUint16(b, uint16(t[0]))
-		b = binary.LittleEndian.AppendUint16(b, 4)
-		b = binary.LittleEndian.AppendUint32(b, 1)
-		b = binary.LittleEndian.AppendUint32(b, t[1])
+		b = le.AppendUint16(le.AppendUint16(b, uint16(t[0])), 4)
+		b = le.AppendUint32(le.AppendUint32(b, 1), t[1])
 	}
-	return append(b, make([]byte, 130-len(b))...)
+	return append(b, make([]byte, max(130-len(b), 4))...)
 }
 
 // TestClaims reads small files that claim large pictures. They are refused,
