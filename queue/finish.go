@@ -71,10 +71,10 @@ func (r *runner) judge(ctx context.Context, t Task, err error) end {
 		return end{outcome: OutcomeLater, work: workLater, reason: firstLine(text), pause: later.after,
 			tell: river.JobSnooze(later.after)}
 	case errors.As(err, &permanent):
-		r.s.log().Error("gave a shot up", fields(t, err)...)
+		r.s.log().Error("gave a pass up", fields(t, err)...)
 		return end{outcome: OutcomeGivenUp, work: workQuarantined, reason: firstLine(text), counts: true, tell: river.JobCancel(err)}
 	case t.Attempt >= r.s.o.MaxAttempts:
-		r.s.log().Error("gave a shot up", fields(t, err)...)
+		r.s.log().Error("gave a pass up", fields(t, err)...)
 		return end{outcome: OutcomeGivenUp, work: workQuarantined, counts: true, tell: river.JobCancel(err),
 			reason: fmt.Sprintf("given up after %d attempts: %s", t.Attempt, firstLine(text))}
 	}
@@ -84,7 +84,7 @@ func (r *runner) judge(ctx context.Context, t Task, err error) end {
 
 func firstLine(text string) string {
 	line, _, _ := strings.Cut(text, "\n")
-	return line
+	return clip(line, maxReason)
 }
 
 // conclude is the transaction at an attempt's end. The fence is its second
@@ -99,11 +99,15 @@ func (s *Store) conclude(ctx context.Context, tx *sql.Tx, job *river.Job[jobArgs
 	if e.pause > 0 {
 		next = ns(now.Add(e.pause))
 	}
+	tries := 0
+	if e.counts {
+		tries = 1
+	}
 	suspect := t.Suspect && e.outcome == OutcomeInterrupted
 	n, err := exec(ctx, tx, `
 		update work set state = ?, reason = ?, tries = tries + ?, next_ns = ?, suspect = ?
 		where shot_id = ? and pass = ? and job_id = ? and attempt_id = ? and state = 'running'`,
-		e.work, e.reason, e.counts, next, suspect, t.ShotID, t.Pass, job.ID, t.AttemptID)
+		e.work, e.reason, tries, next, suspect, t.ShotID, t.Pass, job.ID, t.AttemptID)
 	if err != nil {
 		return err
 	}
@@ -137,9 +141,22 @@ func errorText(e end) string {
 		return ""
 	}
 	if e.tell != nil && (e.outcome == OutcomeFailed || e.outcome == OutcomeGivenUp) {
-		return e.tell.Error()
+		return clip(e.tell.Error(), maxError)
 	}
 	return e.reason
+}
+
+// What the ledger keeps of an error, in bytes: a stack, but no core dump.
+const (
+	maxError  = 16 << 10
+	maxReason = 500
+)
+
+func clip(text string, n int) string {
+	if len(text) <= n {
+		return text
+	}
+	return strings.ToValidUTF8(text[:n], "") + " …"
 }
 
 // deliver writes a result into the shot, queues the pass that follows, and

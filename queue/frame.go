@@ -30,8 +30,8 @@ type Added struct {
 const frameBatch = 1000
 
 // AddFrames enters frame files into the ledger, or their new content, and
-// answers for each in order. Adding the same content again does nothing. It
-// works in transactions of 1000 frames; after an error, add all again.
+// answers for each in order. Adding the same content again does nothing, unless
+// it was rejected and is not any more (the stamp's pattern was mended). It works in transactions of 1000 frames; after an error, add all again.
 func (s *Store) AddFrames(ctx context.Context, frames []Frame) ([]Added, error) {
 	out := make([]Added, 0, len(frames))
 	for len(frames) > 0 {
@@ -74,7 +74,8 @@ func (s *Store) addBatch(ctx context.Context, tx *sql.Tx, frames []Frame) ([]Add
 		switch {
 		case errors.Is(err, sql.ErrNoRows):
 			out[i], err = s.insertFrame(ctx, tx, f)
-		case err == nil && old.Size == f.Size && mtime == ns(f.ModTime):
+		case err == nil && old.Size == f.Size && mtime == ns(f.ModTime) &&
+			(old.State != FrameRejected || f.State == FrameRejected):
 			out[i] = Added{ID: old.ID, Change: FrameSame, ShotID: old.ShotID}
 		case err == nil:
 			out[i], err = s.changeFrame(ctx, tx, old, f)
@@ -151,9 +152,10 @@ type Print struct {
 	ModTime time.Time
 }
 
-// Known returns every frame file of an arm that the ledger has, by path.
+// Known returns the frame files of an arm that need not be looked at again, by
+// path: all but the rejected ones, which another configuration may take.
 func (r *Reader) Known(ctx context.Context, station string, arm Arm) (map[string]Print, error) {
-	rows, err := r.db.QueryContext(ctx, "select path, size, mtime_ns from frame where station = ? and arm = ?", station, arm)
+	rows, err := r.db.QueryContext(ctx, "select path, size, mtime_ns from frame where station = ? and arm = ? and state <> 'rejected'", station, arm)
 	if err != nil {
 		return nil, fmt.Errorf("list the frames known of station %q: %w", station, err)
 	}

@@ -4,6 +4,7 @@ import (
 	"context"
 	"path/filepath"
 	"strconv"
+	"strings"
 	"testing"
 	"time"
 
@@ -27,11 +28,8 @@ func TestLedgerFullWhenWorkEnds(t *testing.T) {
 	w := WorkerFunc(func(context.Context, Task) (Outcome, error) {
 		calls++
 		limitPages(t, s, 0)
-		summary := make([]byte, 1<<20) // needs new pages
-		for i := range summary {
-			summary[i] = ' '
-		}
-		return Outcome{Verdict: "good", Summary: summary}, nil
+		long := `"` + strings.Repeat("x", 1<<20) + `"` // needs new pages
+		return Outcome{Verdict: "good", Summary: []byte(long)}, nil
 	})
 	done := make(chan error, 1)
 	go func() { done <- s.Run(ctx, w, RunOptions{SoftStop: -1}) }()

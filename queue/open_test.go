@@ -156,6 +156,29 @@ func TestLostJobIsQueuedAgain(t *testing.T) {
 	workAll(t, s, 3)
 }
 
+// Jobs queued before the machine's clock was set back by an hour do not wait
+// for that hour.
+func TestClockSetBack(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "ledger.db")
+	s, err := queue.Open(t.Context(), queue.Options{Path: path})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := enter(t.Context(), s, 3); err != nil {
+		t.Fatal(err)
+	}
+	if err := s.Close(); err != nil {
+		t.Fatal(err)
+	}
+	change(t, path, "update river_job set scheduled_at = datetime(scheduled_at, '+1 hour', 'subsec')")
+	s, err = queue.Open(t.Context(), queue.Options{Path: path})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer s.Close()
+	workAll(t, s, 3)
+}
+
 // workAll runs the queue until n shots are done.
 func workAll(t *testing.T, s *queue.Store, n int) {
 	t.Helper()

@@ -34,7 +34,7 @@ func dsn(path string, query url.Values) (string, error) {
 	if !strings.HasPrefix(p, "/") {
 		p = "/" + p // C:/state/ledger becomes /C:/state/ledger
 	}
-	return "file:" + (&url.URL{Path: p}).EscapedPath() + "?" + query.Encode(), nil
+	return "file://" + (&url.URL{Path: p}).EscapedPath() + "?" + query.Encode(), nil
 }
 
 // openWriter opens the one connection that writes.
@@ -130,6 +130,12 @@ func resetRunning(ctx context.Context, tx *sql.Tx) (int64, error) {
 	res, err := tx.ExecContext(ctx, "update river_job set state = 'available' where state = 'running'")
 	if err != nil {
 		return 0, fmt.Errorf("give back running jobs: %w", err)
+	}
+	// A clock that was set back would hold up every job by as much.
+	if _, err := tx.ExecContext(ctx, `
+		update river_job set scheduled_at = datetime('now', 'subsec')
+		where state = 'available' and scheduled_at > datetime('now', 'subsec')`); err != nil {
+		return 0, fmt.Errorf("correct the times of jobs: %w", err)
 	}
 	return res.RowsAffected()
 }

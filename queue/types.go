@@ -65,7 +65,7 @@ type Frame struct {
 	Path        string    `json:"path"` // the file's identity within its station and arm, as the caller names it
 	Size        int64     `json:"size"` // bytes
 	ModTime     time.Time `json:"mod_time"`
-	Stamp       time.Time `json:"stamp"` // when the camera says it was taken, on that camera's clock
+	Stamp       time.Time `json:"stamp,omitzero"` // when the camera says it was taken, on that camera's clock
 	HasTime     bool      `json:"has_time"`
 	Shot        int64     `json:"shot"` // the camera's own shot number
 	HasShot     bool      `json:"has_shot"`
@@ -106,7 +106,7 @@ type Shot struct {
 	Replaced      bool            `json:"replaced"`     // a frame file changed after it was used: Retry uses the new one
 	Created       time.Time       `json:"created"`
 	Updated       time.Time       `json:"updated"`
-	Finished      time.Time       `json:"finished"` // of the last result of the deciding pass; zero: none yet
+	Finished      time.Time       `json:"finished,omitzero"` // of the last result of the deciding pass; zero: none yet
 }
 
 // Attempt is one start of a worker on a shot. Attempts are kept for ever.
@@ -117,7 +117,7 @@ type Attempt struct {
 	Bundle  string    `json:"bundle"`
 	Number  int       `json:"number"` // 1 for the first since the job was queued
 	Started time.Time `json:"started"`
-	Ended   time.Time `json:"ended"` // zero: not yet
+	Ended   time.Time `json:"ended,omitzero"` // zero: not yet
 	Outcome string    `json:"outcome"`
 	Error   string    `json:"error"`
 	Host    string    `json:"host"`

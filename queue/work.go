@@ -3,6 +3,7 @@ package queue
 import (
 	"context"
 	"database/sql"
+	"encoding/json"
 	"errors"
 	"fmt"
 	"runtime/debug"
@@ -50,8 +51,11 @@ func (r *runner) do(ctx context.Context, t Task) (out Outcome, err error) {
 			err = fmt.Errorf("panic: %v\n%s", p, debug.Stack())
 			return
 		}
-		if err != nil && errors.Is(ctx.Err(), context.DeadlineExceeded) {
+		switch {
+		case err != nil && errors.Is(ctx.Err(), context.DeadlineExceeded):
 			err = fmt.Errorf("%w: %w", context.Cause(ctx), err)
+		case err == nil && len(out.Summary) > 0 && !json.Valid(out.Summary):
+			err = Permanent(errors.New("the worker's summary is not JSON: this is a fault of the program"))
 		}
 	}()
 	return r.w.Do(ctx, t)

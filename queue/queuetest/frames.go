@@ -94,7 +94,17 @@ func framesRejected(t *testing.T, l Ledger) {
 	if len(rep.Shots) != 0 || len(rep.Refused) != 1 {
 		t.Errorf("pair with a rejected frame: got %+v, want it refused", rep)
 	}
-	if known, err := b.Known(b.ctx, "bay", queue.Streak); err != nil || len(known) != 1 {
-		t.Errorf("known: got %v, %v, want the rejected frame, so that it is not read again", known, err)
+	if known, err := b.Known(b.ctx, "bay", queue.Streak); err != nil || len(known) != 0 {
+		t.Errorf("known: got %v, %v, want it left out, so that it is looked at again", known, err)
+	}
+	if again, err := b.AddFrames(b.ctx, []queue.Frame{bad}); err != nil || again[0].Change != queue.FrameSame {
+		t.Errorf("rejected again: got %v, %v, want same", again, err)
+	}
+	if again, err := b.AddFrames(b.ctx, []queue.Frame{frame(queue.Streak, 1)}); err != nil || again[0].Change != queue.FrameChanged {
+		t.Errorf("taken after all: got %v, %v, want changed", again, err)
+	}
+	rep = b.commit(queue.Decision{Pairs: []queue.Pair{{Streak: ids[0], Reference: ids[1]}}}, "b1")
+	if len(rep.Shots) != 1 {
+		t.Errorf("pair with the frame that was taken after all: got %+v", rep)
 	}
 }

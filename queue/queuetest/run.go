@@ -209,11 +209,18 @@ func permanent(t *testing.T, l Ledger) {
 	w := &worker{act: func(context.Context, queue.Task) (queue.Outcome, error) {
 		return queue.Outcome{}, fmt.Errorf("read streak frame: %w", queue.Permanent(errTest))
 	}}
-	b.run(w, quickly())
+	stop := b.run(w, quickly())
 	b.untilState(queue.StateQuarantined, id)
+	stop()
 	if got := b.outcomes(id, queue.Full); !slices.Equal(got, []string{queue.OutcomeGivenUp}) {
 		t.Errorf("outcomes: got %v, want one, given up", got)
 	}
+	odd := b.shots(2, 3, "b1")[0]
+	w.act = func(context.Context, queue.Task) (queue.Outcome, error) {
+		return queue.Outcome{Verdict: "good", Summary: []byte("{")}, nil
+	}
+	b.run(w, quickly())
+	b.untilState(queue.StateQuarantined, odd)
 	if queue.Permanent(nil) != nil || queue.Later(nil, time.Second) != nil {
 		t.Error("no error became one")
 	}
