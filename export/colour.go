@@ -51,7 +51,7 @@ func (c *colours) index(v float64) uint8 {
 
 func (c *colours) at(v float64) color.RGBA { return c.table[c.index(v)] }
 
-// ticks returns three to seven round values between lo and hi and how to
+// ticks returns three to eight round values between lo and hi and how to
 // write them.
 func ticks(lo, hi float64) (at []float64, label []string) {
 	step, digits := roundStep((hi - lo) / 5)
@@ -78,6 +78,18 @@ func roundStep(s float64) (step float64, digits int) {
 		return 5 * p, digits
 	}
 	return 10 * p, max(0, digits-1)
+}
+
+// large returns by what to divide values up to hi so that their labels stay
+// short, and the word for it that goes before the unit.
+func large(hi float64) (div float64, word string) {
+	switch {
+	case hi >= 1e8:
+		return 1e6, "million "
+	case hi >= 1e5:
+		return 1e3, "thousand "
+	}
+	return 1, ""
 }
 
 // format writes a number with a true minus sign, and large or tiny ones in
@@ -108,9 +120,11 @@ func (c *canvas) bar(r image.Rectangle, m *colours, label string, under, over bo
 		c.fill(image.Rect(r.Min.X, y, r.Max.X, y+1), m.table[int(math.Round(255*f))])
 	}
 	c.frame(r, faint)
-	at, text := ticks(m.min, m.max)
+	div, word := large(m.max)
+	at, text := ticks(m.min/div, m.max/div)
 	wide := 0
 	for i, v := range at {
+		v *= div
 		y := r.Max.Y - 1 - int(math.Round((v-m.min)/(m.max-m.min)*float64(r.Dy()-1)))
 		c.fill(image.Rect(r.Max.X, y, r.Max.X+6, y+1), ink)
 		c.text(r.Max.X+10, y+sizeSmall/3, sizeSmall, left, ink, text[i])
@@ -123,6 +137,7 @@ func (c *canvas) bar(r image.Rectangle, m *colours, label string, under, over bo
 		c.tip(r.Min.X, r.Dx(), r.Max.Y+1, 1, m.table[0])
 	}
 	size := sizeLabel
+	label = word + label
 	if c.width(size, label) > r.Dy()+20 {
 		size = sizeSmall
 	}

@@ -42,11 +42,12 @@ func lightCurve(r *Result) measure.Curve {
 // and full width at half maximum where they were measured.
 func light(w io.Writer, r *Result) error {
 	c := lightCurve(r)
+	div, word := large(top(c))
 	p := plot.New()
-	style(p)
+	style(p, div)
 	p.Title.Text = title(r)
 	p.X.Label.Text = "time (" + c.TimeUnit + ")"
-	p.Y.Label.Text = "light (" + c.Unit + ")"
+	p.Y.Label.Text = "light (" + word + c.Unit + ")"
 	grid := plotter.NewGrid()
 	grid.Vertical.Color, grid.Horizontal.Color = color.Gray{0xe0}, color.Gray{0xe0}
 	p.Add(grid)
@@ -90,7 +91,8 @@ func light(w io.Writer, r *Result) error {
 	return err
 }
 
-func style(p *plot.Plot) {
+// style sets fonts and ticks; the labels of the upright axis are divided.
+func style(p *plot.Plot, div float64) {
 	sans := func(t *text.Style, size float64) {
 		t.Font = font.Font{Typeface: "Liberation", Variant: "Sans", Size: vg.Points(size)}
 	}
@@ -101,15 +103,20 @@ func style(p *plot.Plot) {
 		sans(&a.Tick.Label, 11)
 		a.Label.Padding = vg.Points(4)
 		a.Padding = 0
-		a.Tick.Marker = plot.TickerFunc(func(lo, hi float64) (out []plot.Tick) {
-			at, label := ticks(lo, hi)
-			for i := range at {
-				out = append(out, plot.Tick{Value: at[i], Label: label[i]})
-			}
-			return out
-		})
 	}
+	p.X.Tick.Marker, p.Y.Tick.Marker = marker(1), marker(div)
 	p.BackgroundColor = color.White
+}
+
+// marker sets round ticks, labelled with their value divided.
+func marker(div float64) plot.Ticker {
+	return plot.TickerFunc(func(lo, hi float64) (out []plot.Tick) {
+		at, label := ticks(lo/div, hi/div)
+		for i := range at {
+			out = append(out, plot.Tick{Value: at[i] * div, Label: label[i]})
+		}
+		return out
+	})
 }
 
 // points leaves out values that are not finite.
@@ -182,8 +189,8 @@ func mark(p *plot.Plot, r *Result, c measure.Curve) error {
 	return nil
 }
 
-// place puts the peak's text above the band and the width's to the right of
-// the curve, or above its line where there is no room.
+// place puts the peak's text above the band and the width's beside the curve
+// where there is room, else within it.
 func place(p *plot.Plot, l *plotter.Labels, c measure.Curve) {
 	along := func(i int) float64 { return (l.XYs[i].X - p.X.Min) / (p.X.Max - p.X.Min) }
 	for i := range l.TextStyle {
@@ -203,10 +210,17 @@ func place(p *plot.Plot, l *plotter.Labels, c measure.Curve) {
 	if len(l.XYs) < 2 {
 		return
 	}
-	l.TextStyle[1].XAlign = text.XRight
-	if along(1) < 0.65 {
-		l.TextStyle[1].XAlign = text.XLeft
-		l.XYs[1].X += 0.03 * (p.X.Max - p.X.Min)
+	a, _, _ := halfway(c, l.XYs[1].Y)
+	wide := p.X.Max - p.X.Min
+	t := &l.TextStyle[1]
+	switch t.XAlign = text.XRight; {
+	case along(1) < 0.65: // right of the curve
+		t.XAlign = text.XLeft
+		l.XYs[1].X += 0.03 * wide
+	case (a-p.X.Min)/wide > 0.35: // left of it
+		l.XYs[1].X = a - 0.03*wide
+	default: // within
+		l.XYs[1].X -= 0.06 * wide
 	}
 }
 
@@ -265,5 +279,5 @@ func quantityText(q measure.Quantity) string {
 		return fmt.Sprintf("%.4g %s", q.Value, q.Unit)
 	}
 	digits := min(6, max(0, 1-int(math.Floor(math.Log10(*q.Sigma)))))
-	return fmt.Sprintf("%.*f ± %.*f %s", digits, q.Value, digits, *q.Sigma, q.Unit)
+	return fmt.Sprintf("%s ± %.*f %s", format(q.Value, digits), digits, *q.Sigma, q.Unit)
 }
