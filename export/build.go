@@ -73,8 +73,8 @@ func parts(r *Result, from origin, o *Options) []part {
 }
 
 func shot(r *Result, from origin, o *Options) nexus.Shot {
-	s := nexus.Shot{Title: r.Shot, Start: from.Taken, Program: from.Program, Version: from.Version,
-		Made: from.Started, Cube: r.Cube, Provenance: r.Provenance, Bits: o.Bits,
+	s := nexus.Shot{Title: r.Shot, Start: from.Taken.Time, Program: from.Program, Version: from.Version,
+		Made: from.Started.Time, Cube: r.Cube, Provenance: r.Provenance, Bits: o.Bits,
 		Note: fmt.Sprintf("pass %s, bundle %s", r.Pass, r.Bundle)}
 	for _, f := range r.Frames {
 		s.Frames = append(s.Frames, nexus.Frame{Arm: f.Arm, W: f.W, H: f.H,

@@ -69,14 +69,7 @@ func light(w io.Writer, r *Result) error {
 		dots.GlyphStyle = draw.GlyphStyle{Color: lineColour, Radius: vg.Points(2.5), Shape: draw.CircleGlyph{}}
 		p.Add(dots)
 	}
-	p.Y.Min = min(0, p.Y.Min)
-	p.Y.Max += 0.14 * (p.Y.Max - p.Y.Min)
-	if !(p.Y.Max > p.Y.Min) {
-		p.Y.Max = p.Y.Min + 1
-	}
-	if !(p.X.Max > p.X.Min) {
-		p.X.Min, p.X.Max = p.X.Min-1, p.X.Max+1
-	}
+	limits(p)
 	if err := mark(p, r, c); err != nil {
 		return err
 	}
@@ -89,6 +82,19 @@ func light(w io.Writer, r *Result) error {
 	}
 	_, err = w.Write(b.Bytes())
 	return err
+}
+
+// limits starts the light at 0, leaves room for the peak's label, and keeps
+// both axes from vanishing.
+func limits(p *plot.Plot) {
+	p.Y.Min = min(0, p.Y.Min)
+	p.Y.Max += 0.14 * (p.Y.Max - p.Y.Min)
+	if !(p.Y.Max > p.Y.Min) {
+		p.Y.Max = p.Y.Min + 1
+	}
+	if !(p.X.Max > p.X.Min) {
+		p.X.Min, p.X.Max = p.X.Min-1, p.X.Max+1
+	}
 }
 
 // style sets fonts and ticks; the labels of the upright axis are divided.

@@ -29,7 +29,7 @@ func TestPlace(t *testing.T) {
 			t.Fatal(err)
 		}
 	}
-	r.Provenance = json.RawMessage(fmt.Sprintf(`{"streak":{"path":%q}}`, filepath.Join(taken, "S_2.tif")))
+	r.Provenance = json.RawMessage(fmt.Sprintf(`{"taken":"noon","started":7,"streak":{"path":%q}}`, filepath.Join(taken, "S_2.tif")))
 	for _, dir := range []string{file, other, taken, link, "/", filepath.Join(top, ".hidden"), filepath.Join(top, strings.Repeat("x", 220))} {
 		if err := Publish(context.Background(), dir, r, Options{parts: bare}); !errors.Is(err, ErrPlace) || Retryable(err) {
 			t.Errorf("%s: %v", dir, err)

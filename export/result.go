@@ -102,16 +102,27 @@ func (o *Options) fill() {
 
 // origin is the part of the provenance that is used here.
 type origin struct {
-	Program string    `json:"program"`
-	Version string    `json:"version"`
-	Started time.Time `json:"started"`
-	Taken   time.Time `json:"taken"`
+	Program string  `json:"program"`
+	Version string  `json:"version"`
+	Started lenient `json:"started"`
+	Taken   lenient `json:"taken"`
 	Streak  struct {
 		Path string `json:"path"`
 	} `json:"streak"`
 	Reference struct {
 		Path string `json:"path"`
 	} `json:"reference"`
+}
+
+// lenient is a time that stays zero where it cannot be read, so that the
+// members beside it still are.
+type lenient struct{ time.Time }
+
+func (l *lenient) UnmarshalJSON(b []byte) error {
+	if err := l.Time.UnmarshalJSON(b); err != nil {
+		l.Time = time.Time{}
+	}
+	return nil
 }
 
 // check refuses a result that cannot be published.

@@ -99,24 +99,33 @@ func Sweep(ctx context.Context, parent string, o SweepOptions) (Swept, error) {
 		}
 		stale = append(stale, l)
 	}
+	if err := tidy(ctx, o.disk, stale, &n); err != nil {
+		return n, fmt.Errorf("sweep %s: %w", parent, err)
+	}
+	return n, nil
+}
+
+// tidy finishes the swaps among the stale folders, then removes the rest:
+// what may be the only copy goes back into place before anything is removed.
+func tidy(ctx context.Context, d *disk, stale []leftover, n *Swept) error {
 	var errs []error
-	// Results first: what may be the only copy goes back into place before
-	// anything is removed.
 	for _, l := range stale {
-		if l.end == endPrevious {
-			if err := restore(ctx, o.disk, l); err != nil {
-				errs = append(errs, err)
-				continue
-			}
-			n.Finished++
+		if l.end != endPrevious {
+			continue
 		}
+		if err := restore(ctx, d, l); err != nil {
+			errs = append(errs, err)
+			continue
+		}
+		n.Finished++
 	}
 	for _, l := range stale {
+		var err error
 		switch {
 		case l.end == endPartial:
-			err = o.disk.removeAll(l.path)
+			err = d.removeAll(l.path)
 		case l.end == endReady && exists(l.path):
-			err = discard(ctx, o.disk, l.path)
+			err = discard(ctx, d, l.path)
 		default:
 			continue
 		}
@@ -126,10 +135,7 @@ func Sweep(ctx context.Context, parent string, o SweepOptions) (Swept, error) {
 		}
 		n.Removed++
 	}
-	if err := errors.Join(errs...); err != nil {
-		return n, fmt.Errorf("sweep %s: %w", parent, err)
-	}
-	return n, nil
+	return errors.Join(errs...)
 }
 
 // restore finishes a swap from step 3 on.
