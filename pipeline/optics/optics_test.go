@@ -498,3 +498,33 @@ func TestRefusals(t *testing.T) {
 		}
 	}
 }
+
+func TestSharpness(t *testing.T) {
+	rng := rand.New(rand.NewPCG(seed, 8))
+	m := mustModel(t, Geometry{T: 1, H: 9, W: 40, Code: make([]float32, 360), StreakBlur: Blur{.6, 0}, ReferenceBlur: Blur{1, 0}})
+	s, r := m.Sharpness()
+	// Smear alone is [1/8 3/4 1/8], so 3/4 over 1/4.
+	if s[1] != 3 || !math.IsInf(r[1], 1) {
+		t.Errorf("smear alone %g, no blur %g; want 3, +Inf", s[1], r[1])
+	}
+	x, y := make([]float32, 400), make([]float32, 400)
+	var most float64
+	for range 500 {
+		for j := range x {
+			x[j] = 0
+			if rng.IntN(6) == 0 {
+				x[j] = rng.Float32()
+			}
+		}
+		convolveRow(y, x, m.sx)
+		for j := 1; j+1 < len(y); j++ {
+			if y[j] > 0 {
+				most = max(most, float64(y[j])/float64(y[j-1]+y[j+1]))
+			}
+		}
+	}
+	// 1e-6 is rounding; a lone point reaches the bound.
+	if most > s[0]*(1+1e-6) || most < .99*s[0] {
+		t.Errorf("random light reaches %.4f, bound %.4f", most, s[0])
+	}
+}

@@ -51,3 +51,28 @@ func (m *Model) RowSums(rS, rR []float32) {
 	blur(rR, tmp[len(rR):], tmp[:len(rR)], g.View.Rect.H, g.View.Rect.W, m.rx, m.ry)
 	scale(rR, float32(g.Ratio))
 }
+
+// Sharpness returns, for each arm along x and y, the most that a pixel may
+// exceed the sum of its two neighbours, as a factor: whatever the scene, light
+// is not negative and the blur spreads it, so that with the arm's kernel K
+//
+//	E[j] ≤ max_n K[n]/(K[n−1] + K[n+1]) · (E[j−1] + E[j+1]).
+//
+// It is +Inf along an axis without blur.
+func (m *Model) Sharpness() (streak, reference [2]float64) {
+	return [2]float64{m.sx.sharpness(), m.sy.sharpness()}, [2]float64{m.rx.sharpness(), m.ry.sharpness()}
+}
+
+func (k kernel) sharpness() float64 {
+	at := func(n int) float64 {
+		if n < 0 || n >= len(k.w) {
+			return 0
+		}
+		return float64(k.w[n])
+	}
+	var most float64
+	for n := range k.w {
+		most = max(most, at(n)/(at(n-1)+at(n+1)))
+	}
+	return most
+}

@@ -30,6 +30,9 @@ const (
 // answer after a rough solve and again after a full one; weights taken from
 // single counts would favour pixels that by chance counted few.
 //
+// Pixels that stand out of their neighbours further than the arm's blur allows
+// for any scene (cosmic rays, new hot pixels) are masked first.
+//
 // Lambda starts at o.Lambda (default DefaultLambda), which is near the best on
 // scenes of 20 to 2000 photoelectrons per voxel since Lambda is stated against
 // the noise. The discrepancy principle then asks whether the residual can be
@@ -51,11 +54,14 @@ func Auto(ctx context.Context, p Problem, o Options) (*Result, error) {
 	e := newEngine(p.Model, o.Workers)
 	e.s.set(p.Streak, p.StreakVar)
 	e.r.set(p.Reference, p.ReferenceVar)
-	light := e.firstWeights(&p)
+	light, spikes := e.firstWeights(&p)
 	if e.s.used+e.r.used == 0 {
 		return nil, ErrMasked
 	}
 	res := &Result{Lambda: o.Lambda, Alpha: o.Alpha, Sigma: typicalSigma(&e.s, &e.r), Status: Converged}
+	if res.Spikes = spikes; spikes > 0 {
+		res.Notes = append(res.Notes, fmt.Sprintf("%d pixels stand out of their neighbours as no light can and were left out", spikes))
+	}
 	if !light {
 		res.Notes = append(res.Notes, "neither arm shows light above its read noise: the cube is dark")
 		e.finish(res, &p)
@@ -67,25 +73,27 @@ func Auto(ctx context.Context, p Problem, o Options) (*Result, error) {
 	return res, nil
 }
 
-// firstWeights sets variances from the smoothed frames and reports whether
-// there is any light.
-func (e *engine) firstWeights(p *Problem) bool {
+// firstWeights sets variances from the smoothed frames, masks spikes and
+// reports whether there is any light.
+func (e *engine) firstWeights(p *Problem) (light bool, spikes int) {
 	rows, cols := e.m.StreakShape()
 	rr, rc := e.m.ReferenceShape()
-	light := false
+	sharpS, sharpR := e.m.Sharpness()
 	for _, v := range []struct {
 		a          *arm
 		n          *Noise
 		rows, cols int
-	}{{&e.s, p.StreakNoise, rows, cols}, {&e.r, p.ReferenceNoise, rr, rc}} {
+		sharp      [2]float64
+	}{{&e.s, p.StreakNoise, rows, cols, sharpS}, {&e.r, p.ReferenceNoise, rr, rc, sharpR}} {
 		mean, weight := make([]float32, v.rows*v.cols), make([]float32, v.rows*v.cols)
 		smooth(mean, weight, v.a.data, v.a.vari, v.rows, v.cols)
 		if v.a.lit(v.n, mean, weight) {
 			light = true
 		}
 		v.a.weigh(v.n, mean)
+		spikes += v.a.spikes(v.cols, v.sharp)
 	}
-	return light
+	return light, spikes
 }
 
 type auto struct {

@@ -52,8 +52,8 @@
 // touches nothing global; a Problem may be solved by several goroutines at
 // once. Rows are worked in bands whose height depends on the shape alone, sums
 // over bands run in their order, and products are rounded before they are
-// added: the result has the same bits for any number of workers and on any
-// machine that rounds float32 as IEEE 754 says. Magnitudes under 1e-18 are set
+// added (no fused multiply-add): the result has the same bits for any number of
+// workers. Magnitudes under 1e-18 are set
 // to 0, so no denormal numbers arise.
 //
 // # References

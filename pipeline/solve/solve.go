@@ -63,7 +63,7 @@ type Options struct {
 	Lambda float64
 
 	// Alpha is the weight of change in time against change in space,
-	// pixel per frame. Default 0.1. Negative switches change in time off.
+	// pixel per frame. Default 0.15. Negative switches change in time off.
 	Alpha float64
 
 	// MaxIter bounds the iterations of one solve. Default 600.
@@ -85,7 +85,7 @@ type Options struct {
 // Defaults.
 const (
 	DefaultLambda = 0.4
-	DefaultAlpha  = 0.1
+	DefaultAlpha  = 0.15
 )
 
 // Recorder follows a solve. It is called from the goroutine that called
@@ -132,6 +132,9 @@ type Result struct {
 
 	// NotFinite counts pixels masked because their value was not finite.
 	NotFinite int
+
+	// Spikes counts pixels that Auto masked since no light can look so.
+	Spikes int
 
 	Trajectory []Progress // every CheckEvery iterations
 	Notes      []string   // what the user should know, plain sentences
@@ -312,7 +315,7 @@ func typicalSigma(arms ...*arm) float64 {
 		for j, v := range a.vari {
 			if v > 0 {
 				e := max(float64(a.data[j]), 0)
-				sv += e * float64(v)
+				sv += float64(e * float64(v))
 				se += e
 				v0 += float64(v)
 				n++

@@ -18,7 +18,7 @@ func (a *arm) weigh(n *Noise, light []float32) {
 		if n.Gain != nil {
 			gain = float64(n.Gain[j])
 		}
-		s := float64(n.Read[j]) + gain*l + n.Floor*n.Floor*l*l
+		s := float64(n.Read[j]) + float64(gain*l) + float64(n.Floor*n.Floor*l*l)
 		if !(s > 0 && s <= math.MaxFloat32) {
 			a.vari[j], a.data[j], a.dual[j] = -1, 0, 0
 			a.used--
@@ -89,4 +89,50 @@ func (a *arm) lit(n *Noise, mean, weight []float32) bool {
 		}
 	}
 	return sum > 0 && sum*sum > darkLimit*darkLimit*vari
+}
+
+const (
+	// spikeSigmas is how far, in standard deviations, a pixel must stand
+	// out to be a spike: never by chance in a frame of millions.
+	spikeSigmas = 8
+	// spikeMargin allows for a blur that is really narrower than
+	// calibrated: half as much again in contrast between neighbours.
+	spikeMargin = 1.5
+)
+
+// spikes masks usable pixels that exceed the sum of their neighbours, along x
+// and also along y, by more than sharp (see optics.Model.Sharpness) allows,
+// and pixels that lie as far under 0. It returns their number. Along an axis
+// without blur, or beside a masked pixel or the edge, nothing can be said.
+func (a *arm) spikes(cols int, sharp [2]float64) int {
+	var found []int
+	for j, v := range a.vari {
+		if v <= 0 {
+			continue
+		}
+		d := float64(a.data[j])
+		if d < 0 && d*d > spikeSigmas*spikeSigmas*float64(v) {
+			found = append(found, j)
+			continue
+		}
+		c := j % cols
+		if c > 0 && c+1 < cols && j >= cols && j+cols < len(a.vari) &&
+			a.spike(j, 1, sharp[0]*spikeMargin) && a.spike(j, cols, sharp[1]*spikeMargin) {
+			found = append(found, j)
+		}
+	}
+	for _, j := range found {
+		a.vari[j], a.data[j], a.dual[j] = -1, 0, 0
+		a.used--
+	}
+	return len(found)
+}
+
+func (a *arm) spike(j, step int, sharp float64) bool {
+	v0, v1 := float64(a.vari[j-step]), float64(a.vari[j+step])
+	if v0 <= 0 || v1 <= 0 || math.IsInf(sharp, 1) {
+		return false
+	}
+	over := float64(a.data[j]) - sharp*(max(float64(a.data[j-step]), 0)+max(float64(a.data[j+step]), 0))
+	return over > 0 && over*over > spikeSigmas*spikeSigmas*(float64(a.vari[j])+sharp*sharp*(v0+v1))
 }
