@@ -55,17 +55,24 @@ func measureArm(l *loader, s *ArmSeries, repeats [][]string) (*Arm, *ArmFit, err
 func (f *ArmFit) gain(l *loader, s *ArmSeries, a *Arm, dark plane, ok []bool, repeats [][]string) error {
 	t := &f.Transfer
 	t.Source = "flat pairs"
-	pairs := s.Flat
-	if len(pairs) == 0 {
-		t.Source = "repeated frames of steady light"
-		for _, set := range repeats {
-			for i := 0; i+1 < len(set); i += 2 {
-				pairs = append(pairs, [2]string{set[i], set[i+1]})
-			}
+	var again [][2]string
+	for _, set := range repeats {
+		for i := 0; i+1 < len(set); i += 2 {
+			again = append(again, [2]string{set[i], set[i+1]})
 		}
 	}
-	if err := f.pairs(l, s, pairs, dark, ok); err != nil {
+	more, err := f.pairs(l, again, dark, ok, true)
+	if err != nil {
 		return err
+	}
+	if t.Levels, err = f.pairs(l, s.Flat, dark, ok, false); err != nil {
+		return err
+	}
+	for i, e := range s.Exposure {
+		t.Levels[i].Exposure = e
+	}
+	if len(t.Levels) == 0 {
+		t.Source, t.Levels, more = "repeated frames of steady light", more, nil
 	}
 	if len(t.Levels) == 0 {
 		t.K, t.SigmaK, t.Source = 1, 0, "assumed"
@@ -82,6 +89,12 @@ func (f *ArmFit) gain(l *loader, s *ArmSeries, a *Arm, dark plane, ok []bool, re
 		a.Flat = ones(len(a.Bad))
 		return nil
 	}
+	if len(more) > 0 {
+		if err := t.join(more); err != nil {
+			return fmt.Errorf("gain of the %s arm: %w", l.arm, err)
+		}
+		t.Source = "flat pairs and repeated frames"
+	}
 	return f.flat(l, a, dark)
 }
 
@@ -97,35 +110,50 @@ func (f *ArmFit) warn(format string, args ...any) {
 	f.Warnings = append(f.Warnings, fmt.Sprintf(format, args...))
 }
 
-func (f *ArmFit) pairs(l *loader, s *ArmSeries, pairs [][2]string, dark plane, ok []bool) error {
-	t := &f.Transfer
-	for i, p := range pairs {
+// pairs measures pairs of frames. Repeated frames light only part of the
+// sensor, and one that cannot be used is no fault.
+func (f *ArmFit) pairs(l *loader, pairs [][2]string, dark plane, ok []bool, repeat bool) (levels []Level, err error) {
+	read := math.Sqrt(f.Transfer.DarkVar)
+	for _, p := range pairs {
 		y0, err := l.frame(p[0])
 		if err != nil {
-			return err
+			return nil, err
 		}
 		y1, err := l.frame(p[1])
 		if err != nil {
-			return err
+			return nil, err
 		}
 		use := append([]bool(nil), ok...)
-		for k := range use {
-			use[k] = use[k] && finite(float64(y0.Pix[k]), float64(y1.Pix[k]))
+		var limit float64
+		if repeat {
+			limit = brightHalf(y0.Pix, dark, ok)
 		}
-		level, err := pairLevel(y0.Pix, y1.Pix, dark, use, math.Sqrt(t.DarkVar))
-		if err != nil {
-			if len(s.Flat) > 0 {
-				return fmt.Errorf("flat pair %q and %q of the %s arm: %w", p[0], p[1], l.arm, err)
-			}
+		for k := range use {
+			v, w := float64(y0.Pix[k]), float64(y1.Pix[k])
+			use[k] = use[k] && finite(v, w) && (!repeat || v+w-2*dark.v[k] > 2*limit)
+		}
+		level, err := pairLevel(y0.Pix, y1.Pix, dark, use, read)
+		if err != nil && repeat {
 			continue
 		}
-		level.files = p
-		if i < len(s.Exposure) {
-			level.Exposure = s.Exposure[i]
+		if err != nil {
+			return nil, fmt.Errorf("flat pair %q and %q of the %s arm: %w", p[0], p[1], l.arm, err)
 		}
-		t.Levels = append(t.Levels, level)
+		level.files = p
+		levels = append(levels, level)
 	}
-	return nil
+	return levels, nil
+}
+
+// brightHalf is half of the bright end of a frame, dark taken off.
+func brightHalf(pix []float32, dark plane, ok []bool) float64 {
+	v := make([]float64, 0, len(pix))
+	for i, p := range pix {
+		if ok[i] && finite(float64(p)) {
+			v = append(v, float64(p)-dark.v[i])
+		}
+	}
+	return quantile(v, 0.98) / 2
 }
 
 // flat sums the pairs that are not saturated.
@@ -134,7 +162,7 @@ func (f *ArmFit) flat(l *loader, a *Arm, dark plane) error {
 	sum := newPlane(a.W, a.H)
 	n := 0
 	for _, v := range t.Levels {
-		if v.full || t.Saturation > 0 && v.raw > linearUpTo*t.Saturation || v.Var < collapse*(t.K*v.Mean+t.DarkVar) && !v.Used {
+		if v.Repeat || v.full || t.Saturation > 0 && v.raw > linearUpTo*t.Saturation || v.Var < collapse*(t.K*v.Mean+t.DarkVar) && !v.Used {
 			continue
 		}
 		for _, name := range v.files {

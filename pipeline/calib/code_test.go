@@ -12,13 +12,23 @@ import (
 
 func TestLookCode(t *testing.T) {
 	for name, change := range map[string]func(*rig.Options){
-		"default":        func(*rig.Options) {},
-		"pitch1":         func(o *rig.Options) { o.Pitch = 1 },
-		"pitch1.0 blur1": func(o *rig.Options) { o.Pitch = 1; o.Streak.SigmaX = 1; o.Streak.SigmaY = 0.5 },
-		"shifted":        func(o *rig.Options) { o.CodeX, o.CodeY = 0.3, 0.6 },
-		"odd":            func(o *rig.Options) { o.Pitch = 2.7; o.CodeX = 0.4 },
-		"nudged":         func(o *rig.Options) { o.NudgeX, o.NudgeY = 0.3, -0.4 },
-		"pitch3":         func(o *rig.Options) { o.Pitch = 3; o.Low = 0.1; o.High = 0.8 },
+		"blur1.2": func(o *rig.Options) { o.Pitch = 1; o.Streak.SigmaX = 1.2; o.Streak.SigmaY = 1.2 },
+		"blur.9":  func(o *rig.Options) { o.Pitch = 1; o.Streak.SigmaX = .9; o.Streak.SigmaY = .9 },
+		"dim":     func(o *rig.Options) { o.Pitch = 1; o.Streak.FullWell = 9000; o.Streak.Bits = 12 },
+		"dim.9": func(o *rig.Options) {
+			o.Pitch = 1
+			o.Streak.FullWell = 9000
+			o.Streak.Bits = 12
+			o.Streak.SigmaX = .9
+			o.Streak.SigmaY = .9
+		},
+		"dim1.2": func(o *rig.Options) {
+			o.Pitch = 1
+			o.Streak.FullWell = 9000
+			o.Streak.Bits = 12
+			o.Streak.SigmaX = 1.2
+			o.Streak.SigmaY = 1.2
+		},
 	} {
 		o := rig.Default()
 		change(&o)

@@ -2,6 +2,7 @@ package calib
 
 import (
 	"math"
+	"math/rand/v2"
 
 	"gonum.org/v1/gonum/mat"
 )
@@ -126,45 +127,55 @@ func (b *elements) fillPlain() {
 	heal(p, b.mask)
 }
 
-// wiener is the linear estimate of E for elements of mean c and variance v
-// and the noise of the data: singular vectors of P and Q diagonalise (3).
-func (b *elements) wiener(p, q *mat.Dense, c, v float64) bool {
+// bounded is the estimate of E between 0 and 1: least squares by the
+// alternating direction method of multipliers (S. Boyd et al., Found. Trends
+// Mach. Learn. 3, 2011, 1–122, sect. 5.1), whose linear step is exact since the
+// singular vectors of P and Q diagonalise (3).
+func (b *elements) bounded(p, q *mat.Dense) bool {
 	var sp, sq mat.SVD
 	if !sp.Factorize(p, mat.SVDThin) || !sq.Factorize(q, mat.SVDThin) {
 		return false
 	}
-	var up, vp, uq, vq mat.Dense
-	sp.UTo(&up)
+	var vp, vq, t, db, z, y, r mat.Dense
 	sp.VTo(&vp)
-	sq.UTo(&uq)
 	sq.VTo(&vq)
-	ny, nx := colsOf(p), colsOf(q)
-	ones := mat.NewDense(ny, nx, nil)
-	for i := range ny {
-		for j := range nx {
-			ones.Set(i, j, c)
-		}
-	}
-	var base, t, r, z mat.Dense
-	t.Mul(p, ones)
-	base.Mul(&t, q.T())
-	r.Sub(b.d, &base)
-	t.Reset()
-	t.Mul(up.T(), &r)
-	z.Mul(&t, &uq)
 	s1, s2 := sp.Values(nil), sq.Values(nil)
-	n := max(b.noise, 1e-8*b.signal) / v
-	z.Apply(func(i, j int, x float64) float64 {
-		s := s1[i] * s2[j]
-		return x * s / (s*s + n)
-	}, &z)
-	t.Reset()
-	t.Mul(&vp, &z)
+	ny, nx := colsOf(p), colsOf(q)
+	t.Mul(p.T(), b.d)
+	r.Mul(&t, q)
+	into := func(dst, m *mat.Dense) { // Vpᵀ m Vq
+		var t mat.Dense
+		t.Mul(vp.T(), m)
+		dst.Mul(&t, &vq)
+	}
+	db = *mat.NewDense(ny, nx, nil)
+	into(&db, &r)
+	z, y = *mat.NewDense(ny, nx, nil), *mat.NewDense(ny, nx, nil)
+	z.Apply(func(int, int, float64) float64 { return 0.5 }, &z)
 	b.e = mat.NewDense(ny, nx, nil)
-	b.e.Mul(&t, vq.T())
-	b.e.Add(b.e, ones)
+	rho := 12 * max(b.noise, 1e-6*b.signal) // 3 times the noise over the variance of open and closed
+	diff, c := mat.NewDense(ny, nx, nil), mat.NewDense(ny, nx, nil)
+	for range boundedSteps {
+		diff.Sub(&z, &y)
+		into(c, diff)
+		c.Apply(func(i, j int, v float64) float64 {
+			s := s1[i] * s2[j]
+			return (db.At(i, j) + rho*v) / (s*s + rho)
+		}, c)
+		t.Reset()
+		t.Mul(&vp, c)
+		b.e.Mul(&t, vq.T())
+		y.Add(&y, b.e)
+		z.Apply(func(i, j int, _ float64) float64 { return max(0, min(1, y.At(i, j))) }, &z)
+		y.Sub(&y, &z)
+	}
+	b.e.Copy(&z)
 	return true
 }
+
+// boundedSteps is enough for the pattern to stand; what is left is turned
+// over one by one.
+const boundedSteps = 120
 
 func colsOf(m *mat.Dense) int { _, c := m.Dims(); return c }
 
@@ -196,13 +207,13 @@ func levels(c []float64) (lo, hi float64) {
 	return lo, hi
 }
 
-// binary finds the two-level E: the Wiener estimate cut at the middle, then
+// binary finds the two-level E: the bounded estimate cut at the middle, then
 // single elements and pairs of neighbours turned over as long as that lowers
 // the squares (iterated conditional modes: J. Besag, J. R. Stat. Soc. B 48,
 // 1986, 259–302; pairs because the blur hardly tells a swap of neighbours
-// from none).
-func (b *elements) binary(p, q *mat.Dense) bool {
-	if !b.wiener(p, q, 0.5, 0.25) {
+// from none). If that gets stuck and thorough is set, the pattern is annealed.
+func (b *elements) binary(p, q *mat.Dense, thorough bool) bool {
+	if !b.bounded(p, q) {
 		return false
 	}
 	b.lo, b.hi = levels(b.e.RawMatrix().Data)
@@ -213,6 +224,28 @@ func (b *elements) binary(p, q *mat.Dense) bool {
 		}
 		return 0
 	}, b.e)
+	b.settle(p, q)
+	if stuck := b.misfit2(p, q); thorough && stuck > stuckAt*b.noise && stuck < giveUp*b.signal {
+		was, lo, hi := mat.DenseCopyOf(b.e), b.lo, b.hi
+		b.anneal(p, q)
+		b.settle(p, q)
+		if b.misfit2(p, q) > stuck {
+			b.e, b.lo, b.hi = was, lo, hi
+		}
+	}
+	b.e.Apply(func(_, _ int, v float64) float64 { return b.lo + (b.hi-b.lo)*v }, b.e)
+	return true
+}
+
+// Annealing is worth while if the misfit is this much more than noise, and
+// less than this part of the signal.
+const (
+	stuckAt = 2
+	giveUp  = 0.02
+)
+
+// settle turns elements over and fits the levels in turns.
+func (b *elements) settle(p, q *mat.Dense) {
 	for range 6 {
 		b.fitLevels(p, q)
 		if b.flip(p, q) == 0 {
@@ -220,8 +253,6 @@ func (b *elements) binary(p, q *mat.Dense) bool {
 		}
 	}
 	b.fitLevels(p, q)
-	b.e.Apply(func(_, _ int, v float64) float64 { return b.lo + (b.hi-b.lo)*v }, b.e)
-	return true
 }
 
 // fitLevels finds lo and hi by least squares for a pattern of 0 and 1 in e.
@@ -246,58 +277,87 @@ func (b *elements) fitLevels(p, q *mat.Dense) {
 	}
 }
 
-// flip works on J = tr(G E F Eᵀ) − 2 tr(Eᵀ B), G = PᵀP, F = QᵀQ, B = PᵀDQ,
-// whose gradient is kept up to date. It returns the number of changes.
-func (b *elements) flip(p, q *mat.Dense) (turned int) {
-	var g, f, pd, bb, t, grad mat.Dense
-	g.Mul(p.T(), p)
-	f.Mul(q.T(), q)
+// pool is the state in which single elements are turned over. It works on
+//
+//	J = tr(G E F Eᵀ) − 2 tr(Eᵀ B),   G = PᵀP, F = QᵀQ, B = PᵀDQ
+//
+// the squared residual but for a constant, and keeps half its gradient.
+type pool struct {
+	b      *elements
+	g, f   mat.Dense
+	grad   mat.Dense
+	ny, nx int
+	ry, rx int
+}
+
+func (b *elements) pool(p, q *mat.Dense) *pool {
+	var pd, bb, t mat.Dense
+	s := &pool{b: b}
+	s.g.Mul(p.T(), p)
+	s.f.Mul(q.T(), q)
 	pd.Mul(p.T(), b.d)
 	bb.Mul(&pd, q)
 	full := mat.DenseCopyOf(b.e)
 	full.Apply(func(_, _ int, v float64) float64 { return b.lo + (b.hi-b.lo)*v }, full)
-	t.Mul(&g, full)
-	grad.Mul(&t, &f)
-	grad.Sub(&grad, &bb)
-	ny, nx := b.e.Dims()
-	ry, rx := bandwidth(&g), bandwidth(&f)
-	step := func(i, j int) float64 {
-		if b.e.At(i, j) > 0.5 {
-			return b.lo - b.hi
-		}
-		return b.hi - b.lo
+	t.Mul(&s.g, full)
+	s.grad.Mul(&t, &s.f)
+	s.grad.Sub(&s.grad, &bb)
+	s.ny, s.nx = b.e.Dims()
+	s.ry, s.rx = bandwidth(&s.g), bandwidth(&s.f)
+	return s
+}
+
+// step is the change of an element's value if it is turned over.
+func (s *pool) step(i, j int) float64 {
+	if s.b.e.At(i, j) > 0.5 {
+		return s.b.lo - s.b.hi
 	}
-	turn := func(i, j int) {
-		d := step(i, j)
-		b.e.Set(i, j, 1-b.e.At(i, j))
-		for k := max(0, i-ry); k <= min(ny-1, i+ry); k++ {
-			for l := max(0, j-rx); l <= min(nx-1, j+rx); l++ {
-				grad.Set(k, l, grad.At(k, l)+d*g.At(k, i)*f.At(j, l))
-			}
+	return s.b.hi - s.b.lo
+}
+
+// one is the change of J if element (i, j) is turned over, two if (k, l) is
+// as well.
+func (s *pool) one(i, j int) float64 {
+	d := s.step(i, j)
+	return 2*d*s.grad.At(i, j) + d*d*s.g.At(i, i)*s.f.At(j, j)
+}
+
+func (s *pool) two(i, j, k, l int) float64 {
+	return s.one(i, j) + s.one(k, l) + 2*s.step(i, j)*s.step(k, l)*s.g.At(i, k)*s.f.At(j, l)
+}
+
+func (s *pool) turn(i, j int) {
+	d := s.step(i, j)
+	s.b.e.Set(i, j, 1-s.b.e.At(i, j))
+	for k := max(0, i-s.ry); k <= min(s.ny-1, i+s.ry); k++ {
+		for l := max(0, j-s.rx); l <= min(s.nx-1, j+s.rx); l++ {
+			s.grad.Set(k, l, s.grad.At(k, l)+d*s.g.At(k, i)*s.f.At(j, l))
 		}
-		turned++
 	}
-	pairs := [][2]int{{0, 1}, {1, 0}, {1, 1}, {1, -1}, {0, 2}, {2, 0}}
+}
+
+// partners are the neighbours with which an element is turned over together.
+var partners = [][2]int{{0, 1}, {1, 0}, {1, 1}, {1, -1}, {0, 2}, {2, 0}}
+
+// flip turns over what lowers J until nothing does. It returns the number of
+// changes.
+func (b *elements) flip(p, q *mat.Dense) (turned int) {
+	s := b.pool(p, q)
 	for range 30 {
 		was := turned
-		for i := range ny {
-			for j := range nx {
-				d := step(i, j)
-				one := 2*d*grad.At(i, j) + d*d*g.At(i, i)*f.At(j, j)
-				if one < 0 {
-					turn(i, j)
+		for i := range s.ny {
+			for j := range s.nx {
+				if s.one(i, j) < 0 {
+					s.turn(i, j)
+					turned++
 					continue
 				}
-				for _, o := range pairs {
+				for _, o := range partners {
 					k, l := i+o[0], j+o[1]
-					if k >= ny || l < 0 || l >= nx {
-						continue
-					}
-					e := step(k, l)
-					two := one + 2*e*grad.At(k, l) + e*e*g.At(k, k)*f.At(l, l) + 2*d*e*g.At(i, k)*f.At(j, l)
-					if two < -1e-12 {
-						turn(i, j)
-						turn(k, l)
+					if k < s.ny && l >= 0 && l < s.nx && s.two(i, j, k, l) < -1e-12 {
+						s.turn(i, j)
+						s.turn(k, l)
+						turned += 2
 						break
 					}
 				}
@@ -308,6 +368,52 @@ func (b *elements) flip(p, q *mat.Dense) (turned int) {
 		}
 	}
 	return turned
+}
+
+// The cooling of anneal: sweeps over all elements from the temperature at
+// which the present misfit would be noise down to that of the noise.
+const coolSweeps = 120
+
+// anneal leaves the local minimum in which flip got stuck: S. Kirkpatrick, C.
+// D. Gelatt, M. P. Vecchi, Optimization by simulated annealing, Science 220
+// (1983) 671–680, with the fixed seed of this line.
+func (b *elements) anneal(p, q *mat.Dense) {
+	rng := rand.New(rand.NewPCG(1, 2))
+	s := b.pool(p, q)
+	hot, cold := 2*max(b.misfit2(p, q), 4*b.noise), 2*max(b.noise, 1e-6*b.signal)
+	for n := range coolSweeps {
+		if n%10 == 9 {
+			b.fitLevels(p, q)
+			s = b.pool(p, q)
+		}
+		t := hot * math.Pow(cold/hot, float64(n)/(coolSweeps-1))
+		for range s.ny * s.nx {
+			i, j := rng.IntN(s.ny), rng.IntN(s.nx)
+			if c := s.one(i, j); c < 0 || rng.Float64() < math.Exp(-c/t) {
+				s.turn(i, j)
+				continue
+			}
+			o := partners[rng.IntN(len(partners))]
+			k, l := i+o[0], j+o[1]
+			if k >= s.ny || l < 0 || l >= s.nx {
+				continue
+			}
+			if c := s.two(i, j, k, l); c < 0 || rng.Float64() < math.Exp(-c/t) {
+				s.turn(i, j)
+				s.turn(k, l)
+			}
+		}
+	}
+}
+
+// misfit2 is misfit while e holds a pattern of 0 and 1.
+func (b *elements) misfit2(p, q *mat.Dense) float64 {
+	was := b.e
+	b.e = mat.DenseCopyOf(was)
+	b.e.Apply(func(_, _ int, v float64) float64 { return b.lo + (b.hi-b.lo)*v }, b.e)
+	m := b.misfit(p, q)
+	b.e = was
+	return m
 }
 
 // bandwidth is how far from the diagonal a symmetric matrix matters.

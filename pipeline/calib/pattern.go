@@ -122,7 +122,7 @@ func (b *elements) search(start [2]float64, edges [2]edgeFit, f *CodeFit) edgeFi
 	cost := func() float64 { return b.misfit(b.matrices()) }
 	for round := range 6 {
 		p, q := b.matrices()
-		if !b.binary(p, q) {
+		if !b.binary(p, q, round > 0) {
 			break
 		}
 		b.fill(p, q)
@@ -140,7 +140,8 @@ func (b *elements) search(start [2]float64, edges [2]edgeFit, f *CodeFit) edgeFi
 			break
 		}
 	}
-	b.binary(b.matrices())
+	p, q := b.matrices()
+	b.binary(p, q, true)
 	c := cost()
 	f.Chi2 = c / b.noise
 	f.Excess = b.excess()
@@ -229,30 +230,38 @@ func (f *CodeFit) choose(ex, ey edgeFit, inner edgeFit2) (warn []string) {
 // that explains the frames best with the averaged code. On whole pixels it is
 // the blur of the optics.
 func (f *CodeFit) finish(m *codeModel, b *elements) {
+	b.sigma = f.sigma
+	p, q := b.matrices()
+	b.binary(p, q, true)
+	f.Low, f.High = b.lo, b.hi
+	f.PitchX, f.PitchY = b.gx.pitch, b.gy.pitch
 	f.model = f.sigma
-	var values []float64
-	spread := 0.3
-	if f.TwoLevel {
-		b.sigma = f.sigma
-		b.binary(b.matrices())
-		f.Low, f.High = b.lo, b.hi
-		f.PitchX, f.PitchY = b.gx.pitch, b.gy.pitch
-		values = b.values()
-		if !b.gx.whole() || !b.gy.whole() {
-			m.tune(values, &f.model)
-		}
-		spread = m.spread(values, f.model)
-	} else {
-		for i, s := range f.sigma {
-			f.model[i] = math.Sqrt(max(s*s-2*pixelVar, 0))
-		}
-		values = clamped(f.measured)
-		f.Low, f.High = levels(values)
+	values := b.values()
+	if !b.gx.whole() || !b.gy.whole() {
+		m.tune(values, &f.model)
 	}
-	kx, ky := pixelKernel(f.model[0]), pixelKernel(f.model[1])
-	c := m.restore(values, 1/(spread*spread), kx, ky, 300)
-	f.floor = m.excess(c, kx, ky)
-	f.code = plane{m.w, m.h, c}
+	f.code, f.floor = m.complete(values, f.model, m.spread(values, f.model))
+	if f.TwoLevel {
+		return
+	}
+	var soft [2]float64
+	for i, s := range f.sigma {
+		soft[i] = math.Sqrt(max(s*s-2*pixelVar, 0))
+	}
+	values = clamped(f.measured)
+	if c, floor := m.complete(values, soft, 0.3); floor < f.floor {
+		f.code, f.floor, f.model = c, floor, soft
+		f.Low, f.High = levels(values)
+		f.PitchX, f.PitchY = 0, 0
+	}
+}
+
+// complete restores the code about a prior of the given spread and says what
+// it leaves unexplained.
+func (m *codeModel) complete(prior []float64, sigma [2]float64, spread float64) (plane, float64) {
+	kx, ky := pixelKernel(sigma[0]), pixelKernel(sigma[1])
+	c := m.restore(prior, 1/(spread*spread), kx, ky, 300)
+	return plane{m.w, m.h, c}, m.excess(c, kx, ky)
 }
 
 // whole reports whether all elements end on pixel sides.

@@ -103,7 +103,7 @@ func (b *elements) chooseGrids(gx, gy []grid) {
 		for _, x0 := range gx {
 			b.gx, b.gy = x0, y0
 			p, q := b.matrices()
-			if !b.binary(p, q) {
+			if !b.binary(p, q, false) {
 				continue
 			}
 			// An element more costs what it could gain by chance.

@@ -133,7 +133,7 @@ func modelBlur(sigma, r float64) float64 {
 			view *= sinc(w * math.Sqrt(r*r-1))
 		}
 		want := math.Exp(-2*math.Pi*math.Pi*sigma*sigma*nu*nu) * sinc(nu) / sinc(w)
-		at = append(at, point{nu, view, want, sinc(w) * sinc(w) / (nu*nu + 0.02*0.02)})
+		at = append(at, point{nu, view, want, sinc(w) * sinc(w) / math.Pow(nu*nu+0.02*0.02, 1.5)})
 	}
 	best, _ := minimise(func(s float64) (c float64) {
 		k := pixelKernel(s)

@@ -13,9 +13,12 @@ type Level struct {
 	Exposure float64 // 0 if not known
 	Used     bool    // in the fit of the gain
 	Note     string  // why not
+	Repeat   bool    // not a flat pair but repeated frames of steady light
 
 	files [2]string
 	raw   float64 // ADU, 99.9 % quantile as recorded
+	mean  float64 // ADU, as recorded
+	part  float64 // Sigma over the true variance
 	full  bool    // many pixels stand at the top
 	sum   []float64
 }
@@ -78,6 +81,9 @@ func pairLevel(y0, y1 []float32, dark plane, ok []bool, read float64) (Level, er
 	}
 	m0, m1 = m0/float64(n), m1/float64(n)
 	l := Level{Mean: (m0 + m1) / 2}
+	for _, v := range raw {
+		l.mean += v / float64(n)
+	}
 	l.raw = quantile(raw, 0.999)
 	l.full = atTop(raw, l.raw, read) >= plateauShare
 	if !(l.Mean > 0) || !(m0 > 0 && m1 > 0) {
@@ -94,6 +100,7 @@ func pairLevel(y0, y1 []float32, dark plane, ok []bool, read float64) (Level, er
 		}
 	}
 	l.Var, l.Sigma = halfVariance(d)
+	l.part = l.Sigma / l.Var
 	return l, nil
 }
 
@@ -135,13 +142,21 @@ func halfVariance(d []float64) (v, sigma float64) {
 // photonTransfer fits gain and saturation to measured levels.
 func (t *Transfer) fit(full float64, byHand float64) error {
 	t.findSaturation(full, byHand)
+	return t.regress()
+}
+
+// regress fits the gain to the levels without a note.
+func (t *Transfer) regress() error {
 	base := t.DarkVar
-	for range 5 { // the gain decides which levels are linear, and they the gain
+	for range 10 { // the gain decides which levels are linear, and they the gain
 		var num, den float64
 		for i := range t.Levels {
 			l := &t.Levels[i]
 			if l.Used = l.Note == ""; !l.Used {
 				continue
+			}
+			if t.K > 0 { // a level that came out low by chance must not weigh more for it
+				l.Sigma = l.part * (t.K*l.Mean + base)
 			}
 			w := 1 / (l.Sigma*l.Sigma + t.SigmaDarkVar*t.SigmaDarkVar)
 			num += w * l.Mean * (l.Var - base)
@@ -150,8 +165,9 @@ func (t *Transfer) fit(full float64, byHand float64) error {
 		if den == 0 {
 			break
 		}
+		was := t.K
 		t.K, t.SigmaK = num/den, 1/math.Sqrt(den)
-		if !t.reject() {
+		if !t.reject() && math.Abs(t.K-was) < 1e-6*t.K {
 			break
 		}
 	}
@@ -162,6 +178,26 @@ func (t *Transfer) fit(full float64, byHand float64) error {
 	t.linearity()
 	return nil
 }
+
+// join adds levels from repeated frames that agree with the flats. Light that
+// changes its shape from frame to frame adds variance and is so left out.
+func (t *Transfer) join(more []Level) error {
+	for _, l := range more {
+		off := math.Abs(l.Var - t.DarkVar - t.K*l.Mean)
+		switch l.Repeat = true; {
+		case l.full || t.Saturation > 0 && l.mean > gainUpTo*t.Saturation:
+			l.Note = "above 70 % of saturation"
+		case off > joinSigma*math.Hypot(l.Sigma, t.SigmaK*l.Mean):
+			l.Note = "disagrees with the flats: the light was not steady"
+		}
+		t.Levels = append(t.Levels, l)
+	}
+	return t.regress()
+}
+
+// joinSigma is how far repeated frames may lie off the line of the flats,
+// standard deviations.
+const joinSigma = 3.5
 
 func (t *Transfer) notes() string {
 	s := ""
@@ -240,8 +276,8 @@ func (t *Transfer) findSaturation(full, byHand float64) {
 	if t.Saturation > 0 {
 		limit = gainUpTo * t.Saturation
 	}
-	if peak < len(t.Levels)-1 && t.Levels[peak+1].Var < collapse*t.Levels[peak].Var {
-		limit = min(limit, max(gainUpTo*t.Levels[peak].raw, t.Levels[0].raw))
+	if math.IsInf(plateau, 1) && byHand == 0 && peak < len(t.Levels)-1 && t.Levels[peak+1].Var < collapse*t.Levels[peak].Var {
+		limit = min(limit, max(gainUpTo*t.Levels[peak].mean, t.Levels[0].mean))
 	}
 	for i := range t.Levels {
 		l := &t.Levels[i]
@@ -249,7 +285,7 @@ func (t *Transfer) findSaturation(full, byHand float64) {
 		case l.Note != "":
 		case l.full && !math.IsInf(plateau, 1):
 			l.Note = "saturated"
-		case l.raw > limit:
+		case l.mean > limit:
 			l.Note = "above 70 % of saturation"
 		}
 	}
@@ -282,7 +318,7 @@ func (t *Transfer) linearity() {
 	n := 0
 	in := func(l Level) bool {
 		top := t.Saturation
-		return l.Exposure > 0 && !l.full && (top <= 0 || l.Mean >= linearFrom*top && l.raw <= linearUpTo*top)
+		return l.Exposure > 0 && !l.full && !l.Repeat && (top <= 0 || l.Mean >= linearFrom*top && l.raw <= linearUpTo*top)
 	}
 	for _, l := range t.Levels {
 		if in(l) {
