@@ -91,25 +91,50 @@ func (k kernel) flip() kernel {
 // identity reports whether the kernel changes nothing.
 func (k kernel) identity() bool { return len(k.w) == 1 && k.lo == 0 && k.w[0] == 1 }
 
-// blur convolves the rows×cols plane src with kx along rows and ky along
-// columns into dst, zeros outside. dst, tmp and src must not overlap.
-func blur(dst, tmp, src []float32, rows, cols int, kx, ky kernel) {
-	if kx.identity() {
-		tmp = src
-	} else {
-		for r := range rows {
-			convolveRow(tmp[r*cols:(r+1)*cols], src[r*cols:(r+1)*cols], kx)
+// Spread is a blur of a rows×cols plane in two passes, along rows and then
+// along columns, zeros outside; each pass may be done for a range of rows at a
+// time, and from several goroutines.
+type Spread struct {
+	Rows, Cols int
+	x, y       kernel
+}
+
+// Along does the pass along rows for rows lo ≤ r < hi of src. dst and src are
+// whole planes that do not overlap.
+func (s *Spread) Along(dst, src []float32, lo, hi int) {
+	for r := lo; r < hi; r++ {
+		out, in := dst[r*s.Cols:(r+1)*s.Cols], src[r*s.Cols:(r+1)*s.Cols]
+		if s.x.identity() {
+			copy(out, in)
+		} else {
+			convolveRow(out, in, s.x)
 		}
 	}
-	for r := range rows {
-		out := dst[r*cols : (r+1)*cols]
+}
+
+// Across does the pass along columns for rows lo ≤ r < hi of dst.
+func (s *Spread) Across(dst, src []float32, lo, hi int) {
+	for r := lo; r < hi; r++ {
+		out := dst[r*s.Cols : (r+1)*s.Cols]
 		clear(out)
-		for j, w := range ky.w {
-			if q := r - ky.lo - j; q >= 0 && q < rows {
-				axpy(out, w, tmp[q*cols:(q+1)*cols])
+		for j, w := range s.y.w {
+			if q := r - s.y.lo - j; q >= 0 && q < s.Rows {
+				axpy(out, w, src[q*s.Cols:(q+1)*s.Cols])
 			}
 		}
 	}
+}
+
+// Transpose returns the adjoint. Its passes may be taken in the same order,
+// since they commute.
+func (s *Spread) Transpose() Spread {
+	return Spread{Rows: s.Rows, Cols: s.Cols, x: s.x.flip(), y: s.y.flip()}
+}
+
+// apply does both passes.
+func (s *Spread) apply(dst, tmp, src []float32) {
+	s.Along(tmp, src, 0, s.Rows)
+	s.Across(dst, tmp, 0, s.Rows)
 }
 
 func convolveRow(dst, src []float32, k kernel) {

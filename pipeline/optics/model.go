@@ -50,10 +50,8 @@ type Geometry struct {
 // Model is the operator of equations (1) and (2). It is immutable.
 type Model struct {
 	g          Geometry
-	rows, cols int // padded streak plane
-	sx, sy     kernel
-	sxT, syT   kernel
-	rx, ry     kernel
+	rows, cols int    // padded streak plane
+	s, sT, r   Spread // r is symmetric, its own transpose
 }
 
 // NewModel checks a geometry and prepares its kernels.
@@ -71,11 +69,11 @@ func NewModel(g Geometry) (*Model, error) {
 		g.View = Identity(g.W, g.H)
 	}
 	m := &Model{g: g, rows: g.H + (g.T-1)*g.Step + 2*g.StreakPad, cols: g.W + 2*g.StreakPad}
-	m.sx = newKernel(g.StreakBlur.SigmaX, 0, 0)
-	m.sy = newKernel(g.StreakBlur.SigmaY, float64(g.Step), g.Shift)
-	m.sxT, m.syT = m.sx.flip(), m.sy.flip()
-	m.rx = newKernel(g.ReferenceBlur.SigmaX, 0, 0)
-	m.ry = newKernel(g.ReferenceBlur.SigmaY, 0, 0)
+	m.s = Spread{Rows: m.rows, Cols: m.cols, x: newKernel(g.StreakBlur.SigmaX, 0, 0),
+		y: newKernel(g.StreakBlur.SigmaY, float64(g.Step), g.Shift)}
+	m.sT = m.s.Transpose()
+	m.r = Spread{Rows: g.View.Rect.H, Cols: g.View.Rect.W, x: newKernel(g.ReferenceBlur.SigmaX, 0, 0),
+		y: newKernel(g.ReferenceBlur.SigmaY, 0, 0)}
 	return m, nil
 }
 
@@ -196,15 +194,19 @@ func (m *Model) unshear(x, plane, back []float32) {
 	}
 }
 
+// Spreads returns the parts of the model for callers that share its work
+// among goroutines: B_s, its transpose, and B_r, which is its own.
+func (m *Model) Spreads() (streak, streakT, reference Spread) { return m.s, m.sT, m.r }
+
 // BlurStreak writes B_s(src) to dst; all three are padded streak planes that
 // do not overlap.
 func (m *Model) BlurStreak(dst, tmp, src []float32) {
-	blur(dst, tmp, src, m.rows, m.cols, m.sx, m.sy)
+	m.s.apply(dst, tmp, src)
 }
 
 // BlurStreakAdjoint writes the transpose of BlurStreak.
 func (m *Model) BlurStreakAdjoint(dst, tmp, src []float32) {
-	blur(dst, tmp, src, m.rows, m.cols, m.sxT, m.syT)
+	m.sT.apply(dst, tmp, src)
 }
 
 // Project writes a·B_r(V(src)) of the window plane src to the reference plane
@@ -216,7 +218,7 @@ func (m *Model) Project(dst, tmp, src []float32) {
 		tmp = make([]float32, 2*n)
 	}
 	m.g.View.Apply(tmp[:n], src)
-	blur(dst, tmp[n:2*n], tmp[:n], m.g.View.Rect.H, m.g.View.Rect.W, m.rx, m.ry)
+	m.r.apply(dst, tmp[n:2*n], tmp[:n])
 	scale(dst, float32(m.g.Ratio))
 }
 
@@ -227,8 +229,7 @@ func (m *Model) Unproject(dst, tmp, src []float32) {
 	if len(tmp) < 2*n {
 		tmp = make([]float32, 2*n)
 	}
-	// The kernels of B_r are symmetric, so it is its own transpose.
-	blur(tmp[:n], tmp[n:2*n], src, m.g.View.Rect.H, m.g.View.Rect.W, m.rx, m.ry)
+	m.r.apply(tmp[:n], tmp[n:2*n], src)
 	m.g.View.Adjoint(dst, tmp[:n])
 	scale(dst, float32(m.g.Ratio))
 }

@@ -1,8 +1,10 @@
 package optics
 
 // mul writes dst = S·src; dst has one entry per row.
-func (s *sparse) mul(dst, src []float32) {
-	for r := range dst {
+func (s *sparse) mul(dst, src []float32) { s.mulRange(dst, src, 0, len(dst)) }
+
+func (s *sparse) mulRange(dst, src []float32, lo, hi int) {
+	for r := lo; r < hi; r++ {
 		a, b := s.start[r], s.start[r+1]
 		col, val := s.col[a:b], s.val[a:b]
 		val = val[:len(col)]
@@ -62,6 +64,12 @@ func (v *View) Adjoint(dst, src []float32) {
 	}
 	v.adj.mul(dst, src)
 }
+
+// ApplyRange is Apply for the entries lo ≤ j < hi of dst only.
+func (v *View) ApplyRange(dst, src []float32, lo, hi int) { v.fwd.mulRange(dst, src, lo, hi) }
+
+// AdjointRange is Adjoint for the entries lo ≤ j < hi of dst only.
+func (v *View) AdjointRange(dst, src []float32, lo, hi int) { v.adj.mulRange(dst, src, lo, hi) }
 
 // Coverage returns, for every pixel of the rectangle, how much of its
 // interpolation falls inside the window: 1 inside, 0 for a pixel that sees

@@ -17,7 +17,7 @@ func (m *Model) ColumnSums(dst, wS, wR []float32) {
 func (m *Model) UnprojectAbs(dst, src []float32) {
 	n := len(src)
 	tmp := make([]float32, 2*n)
-	blur(tmp[:n], tmp[n:], src, m.g.View.Rect.H, m.g.View.Rect.W, m.rx, m.ry)
+	m.r.apply(tmp[:n], tmp[n:], src)
 	a := m.g.View.adj.abs()
 	a.mul(dst, tmp[:n])
 	scale(dst, float32(m.g.Ratio))
@@ -48,7 +48,7 @@ func (m *Model) RowSums(rS, rR []float32) {
 	tmp := make([]float32, 2*len(rR))
 	a := g.View.fwd.abs()
 	a.mul(tmp[:len(rR)], depth)
-	blur(rR, tmp[len(rR):], tmp[:len(rR)], g.View.Rect.H, g.View.Rect.W, m.rx, m.ry)
+	m.r.apply(rR, tmp[len(rR):], tmp[:len(rR)])
 	scale(rR, float32(g.Ratio))
 }
 
@@ -60,7 +60,7 @@ func (m *Model) RowSums(rS, rR []float32) {
 //
 // It is +Inf along an axis without blur.
 func (m *Model) Sharpness() (streak, reference [2]float64) {
-	return [2]float64{m.sx.sharpness(), m.sy.sharpness()}, [2]float64{m.rx.sharpness(), m.ry.sharpness()}
+	return [2]float64{m.s.x.sharpness(), m.s.y.sharpness()}, [2]float64{m.r.x.sharpness(), m.r.y.sharpness()}
 }
 
 func (k kernel) sharpness() float64 {

@@ -10,11 +10,12 @@ import (
 // parallel; everything a result depends on is fixed by the shape, so the
 // number of workers changes no bit.
 //
-// An iteration has two parallel parts with a barrier after each:
+// An iteration has two parts, with barriers between and inside:
 //
 //  1. every band sweeps its planes: primal step of plane k, dual step of
 //     plane k−1, streak and reference sums;
-//  2. the dual rows between bands; the data dual of each arm.
+//  2. the dual rows between bands; the data dual of each arm, in chunks of
+//     rows (see dataStep).
 //
 // Part 1 reads duals of the row above its band; those are written in part 2
 // only, from copies of the extrapolated rows on both sides of the edge.
@@ -25,8 +26,10 @@ type engine struct {
 	bands         []*band
 	own, col      []float32 // 1/τ = C·col + own, on the window and the padded plane
 	s, r          arm
+	view          optics.View
 	castS         []float32 // B_sᵀ y_s on the padded plane
 	backR         []float32 // (a·B_r V)ᵀ y_r on the window
+	sum           []float32 // Σ_k of the extrapolated cube, on the window
 	zero          []float32
 	alpha, sigma  float32
 	lambda        float32
@@ -55,6 +58,11 @@ type arm struct {
 	rowSum     []float32
 	bar, now   []float32 // model at the extrapolated and the current cube
 	tmp, plane []float32
+	cast       []float32     // transposed blur along rows of the dual
+	spread     optics.Spread // blur and its transpose
+	spreadT    optics.Spread
+	scale      float32   // of the model after the blur and of its adjoint
+	chunks     []float64 // χ² by chunks of rows
 	used       int
 	chi2       float64
 }
@@ -74,13 +82,19 @@ func newEngine(m *optics.Model, workers int) *engine {
 	rows, cols := m.StreakShape()
 	rr, rc := m.ReferenceShape()
 	e := &engine{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers}
+	e.view = g.View
 	e.own, e.col = make([]float32, e.h*e.w), make([]float32, rows*cols)
 	e.castS = make([]float32, rows*cols)
 	e.backR = make([]float32, e.h*e.w)
 	e.zero = make([]float32, e.w)
 	e.s, e.r = newArm(rows*cols), newArm(rr*rc)
-	e.r.plane = make([]float32, e.h*e.w)
-	e.r.tmp = make([]float32, 2*rr*rc)
+	e.sum = make([]float32, e.h*e.w)
+	e.s.spread, e.s.spreadT, e.r.spread = m.Spreads()
+	e.r.spreadT = e.r.spread
+	e.s.scale, e.r.scale = 1, float32(g.Ratio)
+	for _, a := range []*arm{&e.s, &e.r} {
+		a.chunks = make([]float64, chunks(a.spread.Rows))
+	}
 	m.RowSums(e.s.rowSum, e.r.rowSum)
 	size := bandRows(e.h)
 	for y := 0; y < e.h; y += size {
@@ -91,7 +105,7 @@ func newEngine(m *optics.Model, workers int) *engine {
 
 func newArm(n int) arm {
 	f := func() []float32 { return make([]float32, n) }
-	return arm{data: f(), vari: f(), dual: f(), sigma: f(), inv: f(), rowSum: f(), bar: f(), now: f(), tmp: f(), plane: f()}
+	return arm{data: f(), vari: f(), dual: f(), sigma: f(), inv: f(), rowSum: f(), bar: f(), now: f(), tmp: f(), plane: f(), cast: f()}
 }
 
 func (e *engine) newBand(y0, y1 int) *band {
@@ -209,17 +223,7 @@ const (
 // of the primal step v.
 func (e *engine) iterate(count bool) (dx, total, square float64) {
 	e.each(len(e.bands), func(j int) { e.sweep(j, count) })
-	edges := len(e.bands) - 1
-	e.each(edges+2, func(j int) {
-		switch j {
-		case 0:
-			e.streakDual()
-		case 1:
-			e.referenceDual()
-		default:
-			e.edge(j - 2)
-		}
-	})
+	e.dataStep()
 	for _, b := range e.bands {
 		dx += b.dx
 		total += b.total
@@ -271,54 +275,4 @@ func (e *engine) edge(j int) {
 		row := func(v []float32, k int) []float32 { return v[k*e.w : (k+1)*e.w] }
 		dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], row(b.bottom, k), row(below.top, k), row(b.bottom, min(k+1, e.t-1)), e.alpha, e.sigma, e.lambda)
 	}
-}
-
-// streakDual gathers the bands' streak planes, blurs, steps the dual and
-// casts it back.
-func (e *engine) streakDual() {
-	a := &e.s
-	clear(a.plane)
-	for _, b := range e.bands {
-		for r := range len(b.streak) / e.w {
-			dst := a.plane[(b.y0+r+e.pad)*e.cols+e.pad:][:e.w]
-			for i, v := range b.streak[r*e.w : (r+1)*e.w] {
-				dst[i] += v
-			}
-		}
-	}
-	e.m.BlurStreak(a.bar, a.tmp, a.plane)
-	a.step()
-	e.m.BlurStreakAdjoint(e.castS, a.tmp, a.dual)
-}
-
-func (e *engine) referenceDual() {
-	a := &e.r
-	for _, b := range e.bands {
-		copy(a.plane[b.y0*e.w:], b.sum)
-	}
-	e.m.Project(a.bar, a.tmp, a.plane)
-	a.step()
-	e.m.Unproject(e.backR, a.tmp, a.dual)
-}
-
-// step is the relaxed proximal step of the convex conjugate of
-// ½Σ(·−data)²/vari. The operator is linear, so the model at the primal step v
-// is the mean of those at 2v − x and at x, and the model of the relaxed cube
-// follows by the same relaxation; rounding errors die out by |1−ρ/2| per step.
-func (a *arm) step() {
-	var chi float64
-	for j, v := range a.vari {
-		old := a.now[j]
-		at := (a.bar[j] + old) / 2
-		a.now[j] = old + float32(relax*(at-old))
-		if v <= 0 {
-			continue
-		}
-		d := float64(at - a.data[j])
-		chi += d * d / float64(v)
-		u := a.dual[j] + float32(a.sigma[j]*(a.bar[j]-a.data[j]))
-		u = float32(u*a.inv[j]) - a.dual[j]
-		a.dual[j] = flush(a.dual[j] + float32(relax*u))
-	}
-	a.chi2 = chi
 }
