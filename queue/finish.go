@@ -124,10 +124,6 @@ func (s *Store) conclude(ctx context.Context, tx *sql.Tx, job *river.Job[jobArgs
 		if err := s.deliver(ctx, tx, job, t, out); err != nil {
 			return err
 		}
-	case OutcomeGivenUp:
-		if err := retireJob(ctx, tx, job.ID); err != nil {
-			return err
-		}
 	case OutcomeFailed:
 		s.mu.Lock()
 		s.next[job.ID] = time.Now().Add(e.pause) // River's clock, not ours

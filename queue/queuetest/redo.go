@@ -3,7 +3,9 @@ package queuetest
 import (
 	"context"
 	"slices"
+	"sync/atomic"
 	"testing"
+	"time"
 
 	"unsheard/queue"
 )
@@ -79,12 +81,17 @@ func redoRunning(t *testing.T, l Ledger) {
 	b := open(t, l, onlyFull())
 	id := b.shots(1, 2, "b1")[0]
 	begun := make(chan queue.Task, 10)
-	w := &worker{act: func(ctx context.Context, t queue.Task) (queue.Outcome, error) {
-		begun <- t
-		if t.Bundle == "b1" {
-			<-ctx.Done() // and deaf to it: it claims success
+	var returned atomic.Bool
+	w := &worker{act: func(ctx context.Context, task queue.Task) (queue.Outcome, error) {
+		begun <- task
+		if task.Bundle == "b1" {
+			<-ctx.Done() // and slow and deaf to it: it claims success
+			time.Sleep(500 * time.Millisecond)
+			returned.Store(true)
+		} else if !returned.Load() {
+			t.Error("two attempts at one pass of one shot run at once")
 		}
-		return good(t), nil
+		return good(task), nil
 	}}
 	b.run(w, quickly())
 	<-begun

@@ -85,22 +85,28 @@ func spreadFollows(t *testing.T, l Ledger) {
 	}
 }
 
-// priority: with one slot, no spread pass starts before the last full one, and
-// quick looks do not wait for full passes at all.
+// priority: with one slot, no spread pass starts while a full one waits, not
+// even one that was queued later; and quick looks do not wait for full passes
+// at all.
 func priority(t *testing.T, l Ledger) {
 	b := open(t, l, queue.Options{Passes: []queue.Pass{queue.Quick, queue.Full, queue.Spread}})
-	ids := b.shots(1, 5, "b1")
-	quick := make(chan struct{})
-	var quicks atomic.Int32
+	b.shots(1, 3, "b1")
+	quick, second, more := make(chan struct{}), make(chan struct{}), make(chan struct{})
+	var quicks, fulls atomic.Int32
 	w := &worker{act: func(ctx context.Context, t queue.Task) (queue.Outcome, error) {
-		switch t.Pass {
-		case queue.Quick:
-			if quicks.Add(1) == int32(len(ids)) {
-				close(quick)
-			}
-		case queue.Full:
+		var until chan struct{}
+		switch {
+		case t.Pass == queue.Quick && quicks.Add(1) == 2:
+			close(quick)
+		case t.Pass == queue.Full && fulls.Add(1) == 1:
+			until = quick
+		case t.Pass == queue.Full && fulls.Load() == 2: // the first shot's spread pass is queued
+			close(second)
+			until = more
+		}
+		if until != nil {
 			select {
-			case <-quick:
+			case <-until:
 			case <-ctx.Done():
 				return queue.Outcome{}, ctx.Err()
 			}
@@ -110,14 +116,18 @@ func priority(t *testing.T, l Ledger) {
 	o := quickly()
 	o.Slots, o.QuickSlots = 1, 1
 	b.run(w, o)
-	b.until("all spread passes", func() bool { return len(w.of(queue.Spread)) == len(ids) })
+	<-second
+	b.shots(3, 5, "b1")
+	b.until("quick looks beside a full pass", func() bool { return len(w.of(queue.Quick)) == 4 })
+	close(more)
+	b.until("all spread passes", func() bool { return len(w.of(queue.Spread)) == 4 })
 	var order []queue.Pass
 	for _, task := range w.seen() {
 		if task.Pass != queue.Quick {
 			order = append(order, task.Pass)
 		}
 	}
-	want := slices.Concat(slices.Repeat([]queue.Pass{queue.Full}, len(ids)), slices.Repeat([]queue.Pass{queue.Spread}, len(ids)))
+	want := slices.Concat(slices.Repeat([]queue.Pass{queue.Full}, 4), slices.Repeat([]queue.Pass{queue.Spread}, 4))
 	if !slices.Equal(order, want) {
 		t.Errorf("order: got %v, want %v", order, want)
 	}
