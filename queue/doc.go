@@ -74,6 +74,8 @@
 // method of the Store and no River method without Tx may be called: it would
 // wait for itself for ever.
 //
-// All that is peculiar to SQLite is in sqlite.go and schema_sqlite.sql. Every
+// All that is peculiar to SQLite is in sqlite.go and schema_sqlite.sql. The
+// statements elsewhere are SQL that PostgreSQL reads too, but for the marks of
+// their parameters, and run in a *sql.Tx, which River drives on both. Every
 // engine must pass package queuetest.
 package queue
