@@ -6,7 +6,10 @@ import "math"
 // Relaxation shrinks a dark voxel by a constant factor per iteration, and the
 // projection a dual whose neighbours push outwards; without a floor they would
 // become denormal, and arithmetic on those costs a hundred cycles each.
-const tiny = 1e-18
+const tiny = 0x1p-60
+
+// tinyBits is tiny without its sign bit, shifted up by one.
+const tinyBits = (127 - 60) << 24
 
 // plane is one call of the kernel: the primal step of plane k and the dual
 // step of plane k−1, for the rows of one band. All slices are rows·w long
@@ -125,18 +128,22 @@ func primal(x, now, code, own, cast, col, back, p, q, qUp, r, rBack, streak, sum
 	}
 }
 
-// dual is the second half of step for one row.
+// dual is the second half of step for one row. The last pixel has no neighbour
+// on the right; standing in for it itself it has a difference of 0.
 func dual(p, q, r, b, down, next []float32, alpha, sigma, lambda float32) {
+	m := len(b) - 1
+	dualRun(p[:m], q[:m], r[:m], b[:m], b[1:], down[:m], next[:m], alpha, sigma, lambda)
+	dualRun(p[m:], q[m:], r[m:], b[m:], b[m:], down[m:], next[m:], alpha, sigma, lambda)
+}
+
+// dualRun is dual where ahead holds the right-hand neighbours of b.
+func dualRun(p, q, r, b, ahead, down, next []float32, alpha, sigma, lambda float32) {
 	n := len(b)
-	p, q, r, down, next = p[:n], q[:n], r[:n], down[:n], next[:n]
+	p, q, r, ahead, down, next = p[:n], q[:n], r[:n], ahead[:n], down[:n], next[:n]
 	sigmaT := sigma * alpha
 	limit := lambda * lambda
 	for i := range b {
-		v := b[i]
-		right := v
-		if i+1 < n {
-			right = b[i+1]
-		}
+		v, right := b[i], ahead[i]
 		p0, q0, r0 := p[i], q[i], r[i]
 		u0 := p0 + float32(sigma*(right-v))
 		u1 := q0 + float32(sigma*(down[i]-v))
@@ -152,7 +159,7 @@ func dual(p, q, r, b, down, next []float32, alpha, sigma, lambda float32) {
 }
 
 func flush(v float32) float32 {
-	if v < tiny && v > -tiny {
+	if math.Float32bits(v)<<1 < tinyBits {
 		return 0
 	}
 	return v

@@ -170,9 +170,10 @@ func TestCoarse(t *testing.T) {
 		}
 		got := psnr(r.X, small)
 		t.Logf("%d times coarser: %.2f dB, light %.3f, χ² %.2f, %d iterations %q", n, got, light/want, r.Chi2, r.Iterations, r.Notes)
-		// Code elements are 2 pixels, so at 4 the code is mostly washed out.
-		if least := map[int]float64{2: 24, 4: 20}[n]; got < least || math.Abs(light/want-1) > .03 {
-			t.Errorf("%d times coarser: %.2f dB, want %.0f; %.3f of the light", n, got, least, light/want)
+		// Measured 27.7 and 25.3 dB. Code elements are 2 pixels, so at 4 the
+		// code is mostly washed out.
+		if least := map[int]float64{2: 26.8, 4: 24.5}[n]; got < least || math.Abs(light/want-1) > .03 {
+			t.Errorf("%d times coarser: %.2f dB, want %.1f; %.3f of the light", n, got, least, light/want)
 		}
 	}
 }
