@@ -16,7 +16,7 @@ type Options struct {
 	// package frame.
 	Limits frame.Limits
 
-	// Now is the time written into the bundle; zero leaves it out.
+	// Now is the time written into the bundle; zero means the present.
 	Now time.Time
 
 	// Progress, if not nil, is called before each step.
@@ -37,6 +37,9 @@ type Report struct {
 // Calibrate turns a series into a bundle. It refuses a series from which no
 // usable bundle can be made and says what to change.
 func Calibrate(ctx context.Context, s *Series, o Options) (*Bundle, *Report, error) {
+	if o.Now.IsZero() {
+		o.Now = time.Now().Truncate(time.Second)
+	}
 	c := &calibration{ctx: ctx, s: s, o: o, r: &Report{}, b: &Bundle{
 		Station: s.Station, Direction: s.Direction, Created: o.Now, ValidFrom: s.ValidFrom, ValidUntil: s.ValidUntil,
 		Warnings: append([]string(nil), s.Warnings...),
@@ -277,5 +280,7 @@ func (c *calibration) close() error {
 	if err := b.Validate(); err != nil {
 		return errors.Join(errors.New("the result is not a usable bundle"), err)
 	}
-	return nil
+	var err error
+	b.report, err = c.r.HTML(b)
+	return err
 }

@@ -11,10 +11,10 @@ import (
 // The coarse search: how the window may lie on the reference sensor.
 const (
 	turnMost   = 20.0 // degrees either way of each quarter turn
-	turnStep   = 4.0
+	turnStep   = 5.0
 	scaleLeast = 0.6 // reference px per window px
 	scaleMost  = 1.65
-	scaleStep  = 1.1
+	scaleStep  = 1.12
 	coarseSide = 56   // mean side of the reduced images, px
 	overlap    = 0.55 // part of the window that must lie on the reference sensor
 	keep       = 16   // candidates that are refined

@@ -12,10 +12,11 @@ const (
 	originSlack = 0.02  // spans by which 0 ps may lie outside the delays unremarked
 )
 
-// fitSweep puts a polynomial through the displacements: degree 1 to 7, chosen
-// by the corrected Akaike information criterion (C. M. Hurvich, C.-L. Tsai,
-// Biometrika 76, 1989, 297–307) among those that rise over the whole span;
-// points are weighted by 1/σ².
+// fitSweep puts a polynomial through the displacements: degree 1 to 7 among
+// those that rise over the whole span, points weighted by 1/σ². From eight
+// delays up the corrected Akaike information criterion chooses (C. M.
+// Hurvich, C.-L. Tsai, Biometrika 76, 1989, 297–307); with fewer it has too
+// little to go by, and χ² + 2k with the known uncertainties does.
 func fitSweep(pts []SweepPoint) (*Sweep, error) {
 	n := len(pts)
 	if n < 2 {
@@ -24,8 +25,7 @@ func fitSweep(pts []SweepPoint) (*Sweep, error) {
 	var best *Sweep
 	bestScore := math.Inf(1)
 	for degree := 1; degree <= min(degreeMost, n-1); degree++ {
-		k := float64(degree + 2) // coefficients and the variance
-		if n > 2 && degree > 1 && float64(n) <= k+1 {
+		if degree > 2 && n-degree-1 < 1 { // no curve with turns through every point
 			break
 		}
 		s := &Sweep{First: pts[0].PS, Last: pts[n-1].PS, Coef: make([]float64, degree+1), Points: pts}
@@ -33,11 +33,7 @@ func fitSweep(pts []SweepPoint) (*Sweep, error) {
 		if !ok || !s.rises() {
 			continue
 		}
-		score := float64(n)*math.Log(max(rss/float64(n), 1e-12)) + 2*k
-		if float64(n) > k+1 {
-			score += 2 * k * (k + 1) / (float64(n) - k - 1)
-		}
-		if score < bestScore {
+		if score := degreeScore(rss, n, degree); score < bestScore {
 			best, bestScore = s, score
 		}
 	}
@@ -46,6 +42,21 @@ func fitSweep(pts []SweepPoint) (*Sweep, error) {
 	}
 	best.spreadOf(pts)
 	return best, nil
+}
+
+// aiccFrom is the number of delays from which the scatter itself tells how
+// good the points are.
+const aiccFrom = 8
+
+func degreeScore(rss float64, n, degree int) float64 {
+	if n < aiccFrom {
+		return rss + 2*float64(degree+1)
+	}
+	k, m := float64(degree+2), float64(n) // coefficients and the variance
+	if m <= k+1 {
+		return math.Inf(1)
+	}
+	return m*math.Log(max(rss/m, 1e-12)) + 2*k + 2*k*(k+1)/(m-k-1)
 }
 
 // fit solves for the coefficients and their covariance; rss is Σ r²/σ².
@@ -131,8 +142,8 @@ const firstSlack = 0.05
 //	T = ⌊s(last) + (s(last) − s(last−1)) − s_0⌋ + 1
 //	window.Y + s_0 + H + T − 2 ≤ sensor rows − 1
 func (s *Sweep) frameGrid(w Window, rows int) (first float64, frames int, warn []string, err error) {
-	first = math.Ceil(s.At(s.First) - firstSlack)
-	if up := -float64(w.Y) - first; up > 0 { // earlier light would land above the sensor
+	first = math.Ceil(s.At(s.First)-firstSlack) + 0 // + 0 turns −0 into 0
+	if up := -float64(w.Y) - first; up > 0 {        // earlier light would land above the sensor
 		first += up
 	}
 	n := len(s.Points)

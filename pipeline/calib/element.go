@@ -70,6 +70,8 @@ type elements struct {
 	w, h, pad int
 	d         *mat.Dense // D/L, bordered
 	mask      []bool     // pixels that were measured
+	rows      []bool     // rows that lie on the sensor; the others count for nothing
+	cols      []bool     // columns likewise
 	noise     float64    // mean variance of D/L
 	signal    float64    // mean square of D/L
 	points    float64
@@ -99,12 +101,29 @@ func newElements(m *codeModel) *elements {
 	}
 	b.noise /= b.points
 	b.signal /= b.points
+	b.rows, b.cols = make([]bool, m.d.h), make([]bool, m.d.w)
+	for i, ok := range b.mask {
+		if ok {
+			b.rows[i/m.d.w], b.cols[i%m.d.w] = true, true
+		}
+	}
 	return b
+}
+
+// trim sets the rows to zero that do not count.
+func trim(a *mat.Dense, rows []bool) *mat.Dense {
+	_, n := a.Dims()
+	for i, ok := range rows {
+		for j := 0; j < n && !ok; j++ {
+			a.Set(i, j, 0)
+		}
+	}
+	return a
 }
 
 // matrices returns P and Q for the present grids and blur.
 func (b *elements) matrices() (p, q *mat.Dense) {
-	return b.gy.seen(b.h, b.pad, b.sigma[1]), b.gx.seen(b.w, b.pad, b.sigma[0])
+	return trim(b.gy.seen(b.h, b.pad, b.sigma[1]), b.rows), trim(b.gx.seen(b.w, b.pad, b.sigma[0]), b.cols)
 }
 
 // fill puts the model where pixels are masked.
@@ -125,6 +144,13 @@ func (b *elements) fillPlain() {
 	rows, cols := b.d.Dims()
 	p := plane{cols, rows, b.d.RawMatrix().Data}
 	heal(p, b.mask)
+	for y := range rows {
+		for x := range cols {
+			if !b.rows[y] || !b.cols[x] {
+				b.d.Set(y, x, 0)
+			}
+		}
+	}
 }
 
 // bounded is the estimate of E between 0 and 1: least squares by the

@@ -57,14 +57,47 @@ func fitCode(coded, open image, w Window) (*CodeFit, []string, error) {
 	if err := f.judge(); err != nil {
 		return nil, nil, err
 	}
-	pad := int(math.Ceil(4*max(start[0], start[1]))) + 2
-	m := newCodeModel(coded, w, light, pad)
-	b := newElements(m)
-	b.fillPlain()
-	inner := b.search(start, [2]edgeFit{ex, ey}, f)
+	var best *elements
+	var inner edgeFit2
+	m := newCodeModel(coded, w, light, int(math.Ceil(4*max(start[0], start[1])))+2)
+	for _, s := range starts(ex, ey) {
+		b := newElements(m)
+		b.fillPlain()
+		var trial CodeFit
+		in := b.search(s, [2]edgeFit{ex, ey}, &trial)
+		if best == nil || trial.Excess < f.Excess {
+			best, inner = b, in
+			f.Chi2, f.Excess, f.TwoLevel = trial.Chi2, trial.Excess, trial.TwoLevel
+		}
+		if f.TwoLevel {
+			break
+		}
+	}
 	warn := f.choose(ex, ey, inner)
-	f.finish(m, b)
+	f.finish(m, best)
 	return f, warn, nil
+}
+
+// starts lists the blurs from which the pattern is searched: what the sides
+// of the window say; where they say nothing, what those of the other axis do,
+// then a few guesses.
+func starts(ex, ey edgeFit) (s [][2]float64) {
+	pick := func(e edgeFit, other float64) float64 {
+		if e.ok {
+			return e.sigma
+		}
+		return other
+	}
+	if ex.ok || ey.ok {
+		s = append(s, [2]float64{pick(ex, ey.sigma), pick(ey, ex.sigma)})
+	}
+	if ex.ok && ey.ok {
+		return s
+	}
+	for _, g := range []float64{0.7, 1, 0.45, 1.4} {
+		s = append(s, [2]float64{pick(ex, g), pick(ey, g)})
+	}
+	return s
 }
 
 func (im image) crop(w Window) image {

@@ -53,15 +53,15 @@ func unseen(gram *mat.SymDense, total, noise float64, a *mat.Dense) float64 {
 // as well as single pixels, the best grid of any pitch and phase, and single
 // pixels.
 func (b *elements) findGrids(alongX bool, sigma float64, side [2]float64) (found []grid) {
-	n, m := b.w, b.h
+	n, on := b.w, b.cols
 	d := mat.Matrix(b.d)
 	if alongX {
 		d = b.d.T()
 	} else {
-		n, m = b.h, b.w
+		n, on = b.h, b.rows
 	}
-	area := float64((n + 2*b.pad) * (m + 2*b.pad))
-	total, noise := b.signal*area, b.noise*area
+	total, noise := b.signal*b.points, b.noise*b.points
+	a := axis{n, b.pad, sigma, on}
 	gram := mat.NewSymDense(n+2*b.pad, nil)
 	var g mat.Dense
 	g.Mul(d, d.T())
@@ -72,11 +72,11 @@ func (b *elements) findGrids(alongX bool, sigma float64, side [2]float64) (found
 	}
 	single := newGrid(1, 0, side)
 	best := single
-	limit := unseen(gram, total, noise, single.seen(n, b.pad, sigma))*(1+pitchGain) + pitchFree
+	limit := unseen(gram, total, noise, a.seen(single))*(1+pitchGain) + pitchFree
 	for p := 2; p <= min(int(pitchMost), n/4); p++ {
 		for from := range p {
 			c := newGrid(float64(p), -float64(from), side)
-			if unseen(gram, total, noise, c.seen(n, b.pad, sigma)) <= limit {
+			if unseen(gram, total, noise, a.seen(c)) <= limit {
 				best = c
 			}
 		}
@@ -84,10 +84,10 @@ func (b *elements) findGrids(alongX bool, sigma float64, side [2]float64) (found
 	if best.pitch > 1 {
 		return []grid{best, single}
 	}
-	found = b.anyPitch(gram, n, sigma, side)
+	found = a.anyPitch(gram, side)
 	keep := found[:0]
 	for _, c := range found {
-		if unseen(gram, total, noise, c.seen(n, b.pad, sigma)) <= limit+pitchSlack {
+		if unseen(gram, total, noise, a.seen(c)) <= limit+pitchSlack {
 			keep = append(keep, c)
 		}
 	}
@@ -119,13 +119,23 @@ func (b *elements) chooseGrids(gx, gy []grid) {
 	b.gx, b.gy = x, y
 }
 
+// axis is one direction of the bordered frames.
+type axis struct {
+	n, pad int
+	sigma  float64
+	on     []bool // lines that count
+}
+
+func (x axis) seen(g grid) *mat.Dense { return trim(g.seen(x.n, x.pad, x.sigma), x.on) }
+
 // octaves are the ranges of pitch from each of which the best is kept.
 var octaves = []float64{1.4, 1.75, 2.3, 3.2, 4.6, 7, pitchMost}
 
 // anyPitch searches pitches and phases that are no whole numbers on the
 // middle of the axis and refines the best of each octave on all of it,
 // coarsest first.
-func (b *elements) anyPitch(gram *mat.SymDense, n int, sigma float64, side [2]float64) (found []grid) {
+func (x axis) anyPitch(gram *mat.SymDense, side [2]float64) (found []grid) {
+	n := x.n
 	span := min(n, pitchSpan)
 	at := (n - span) / 2
 	if span < 24 {
@@ -134,7 +144,7 @@ func (b *elements) anyPitch(gram *mat.SymDense, n int, sigma float64, side [2]fl
 	sub := mat.NewSymDense(span, nil)
 	for i := range span {
 		for j := i; j < span; j++ {
-			sub.SetSym(i, j, gram.At(i+at+b.pad, j+at+b.pad))
+			sub.SetSym(i, j, gram.At(i+at+x.pad, j+at+x.pad))
 		}
 	}
 	inner, whole := mat.Trace(sub), mat.Trace(gram)
@@ -147,14 +157,14 @@ func (b *elements) anyPitch(gram *mat.SymDense, n int, sigma float64, side [2]fl
 			steps := max(6, int(p*5))
 			for i := range steps {
 				from := p * float64(i) / float64(steps)
-				c := perRow(sub, inner, newGrid(p, from, [2]float64{0, float64(span)}).seen(span, 0, sigma))
+				c := perRow(sub, inner, newGrid(p, from, [2]float64{0, float64(span)}).seen(span, 0, x.sigma))
 				if c < least {
 					least, best = c, newGrid(p, from+float64(at), side)
 				}
 			}
 		}
 		cost := func(p, from float64) float64 {
-			return perRow(gram, whole, newGrid(p, from, side).seen(n, b.pad, sigma))
+			return perRow(gram, whole, x.seen(newGrid(p, from, side)))
 		}
 		found = append(found, best.refine(n, cost))
 	}

@@ -37,6 +37,7 @@ func TestLook(t *testing.T) {
 	o := rig.Default()
 	st, b, r := calibrated(t, o)
 	look(t, st, b, r)
+	b.Save("/tmp/calib-look")
 }
 
 func look(t *testing.T, st *rig.Station, b *Bundle, r *Report) {

@@ -32,7 +32,7 @@ type bundleFile struct {
 	ID         string    `toml:"id"`
 	Station    string    `toml:"station"`
 	Direction  string    `toml:"direction"`
-	Created    time.Time `toml:"created"`
+	Created    time.Time `toml:"created,omitzero"`
 	ValidFrom  time.Time `toml:"valid_from,omitzero"`
 	ValidUntil time.Time `toml:"valid_until,omitzero"`
 	Frames     int       `toml:"frames"`
@@ -200,12 +200,14 @@ func flags(b []bool) []float32 {
 func (b *Bundle) file() *bundleFile {
 	f := &bundleFile{
 		Format: bundleFormat, Station: b.Station, Direction: b.Direction,
-		Created: b.Created.UTC(),
-		Frames:  b.Frames, First: b.First, Warnings: b.Warnings, Window: b.Window,
+		Frames: b.Frames, First: b.First, Warnings: b.Warnings, Window: b.Window,
 		Registration: registrationFile{b.RegistrationKind, b.Registration[:], b.RegistrationResidual},
 		Ratio:        b.Ratio, Scale: b.Scale,
 		Sweep:  sweepFile(b.Sweep),
 		Streak: b.Streak.file(), Reference: b.Reference.file(),
+	}
+	if !b.Created.IsZero() {
+		f.Created = b.Created.UTC()
 	}
 	if !b.ValidFrom.IsZero() {
 		f.ValidFrom = b.ValidFrom.UTC()

@@ -57,6 +57,7 @@ const (
 	flickerLimit  = 0.2  // largest relative difference within a pair
 	outlier       = 8    // robust standard deviations beyond which a difference is no noise
 	plateauShare  = 0.1  // part of the pixels at the top that makes a plateau
+	plateauRise   = 1.5  // … times those just below
 	plateauWidth  = 1e-3 // width of the top, relative; at least 6 read noises
 	collapse      = 0.5  // variance over expected variance that marks a saturated level
 	saturationGap = 4    // read noises below the plateau where saturation is set
@@ -85,7 +86,7 @@ func pairLevel(y0, y1 []float32, dark plane, ok []bool, read float64) (Level, er
 		l.mean += v / float64(n)
 	}
 	l.raw = quantile(raw, 0.999)
-	l.full = atTop(raw, l.raw, read) >= plateauShare
+	l.full = plateauAt(raw, l.raw, read)
 	if !(l.Mean > 0) || !(m0 > 0 && m1 > 0) {
 		return l, fmt.Errorf("is not brighter than the dark frames: check that the light was on")
 	}
@@ -104,14 +105,20 @@ func pairLevel(y0, y1 []float32, dark plane, ok []bool, read float64) (Level, er
 	return l, nil
 }
 
-// atTop returns the part of sorted values within the top of a plateau.
-func atTop(sorted []float64, top, read float64) float64 {
+// plateauAt reports whether sorted values pile up at their top: many of them
+// there, and more than just below, where the tail of a distribution holds
+// more the lower it gets.
+func plateauAt(sorted []float64, top, read float64) bool {
 	width := max(plateauWidth*math.Abs(top), 6*read)
-	n := 0
-	for i := len(sorted) - 1; i >= 0 && sorted[i] >= top-width; i-- {
-		n++
+	at, below := 0, 0
+	for i := len(sorted) - 1; i >= 0 && sorted[i] >= top-2*width; i-- {
+		if sorted[i] >= top-width {
+			at++
+		} else {
+			below++
+		}
 	}
-	return float64(n) / float64(len(sorted))
+	return float64(at) >= plateauShare*float64(len(sorted)) && float64(at) > plateauRise*float64(below)
 }
 
 // halfVariance is half the variance of differences and its uncertainty,
