@@ -328,11 +328,25 @@ func TestViewPlacesLight(t *testing.T) {
 }
 
 func TestCoverage(t *testing.T) {
-	v := mustView(t, turned(10, .6, 8, 4), 30, 28, 40, 40, 5)
-	c := v.Coverage()
-	mid := c[v.Rect.H/2*v.Rect.W+v.Rect.W/2]
-	if math.Abs(float64(mid)-1) > 1e-5 || c[0] != 0 {
-		t.Errorf("coverage is %g in the middle and %g in the corner, want 1 and 0", mid, c[0])
+	g := Geometry{T: 1, H: 28, W: 30, Code: make([]float32, 28*30), ReferenceBlur: Blur{1, 1}}
+	g.View = mustView(t, turned(10, .6, 8, 4), 30, 28, 40, 40, 5)
+	for name, c := range map[string][]float32{"view": g.View.Coverage(), "model": mustModel(t, g).Coverage()} {
+		mid := c[g.View.Rect.H/2*g.View.Rect.W+g.View.Rect.W/2]
+		if math.Abs(float64(mid)-1) > 1e-5 || math.Abs(float64(c[0])) > 1e-3 {
+			t.Errorf("%s: coverage is %g in the middle and %g in the corner, want 1 and 0", name, mid, c[0])
+		}
+		for j, v := range c {
+			if v < -.1 || v > 1.1 {
+				t.Errorf("%s: coverage of pixel %d is %g", name, j, v)
+			}
+		}
+	}
+	// A sensor that ends inside the window sees only window.
+	g.View = mustView(t, [9]float64{1, 0, -5, 0, 1, -5, 0, 0, 1}, 30, 28, 18, 16, 4)
+	for j, v := range mustModel(t, g).Coverage() {
+		if math.Abs(float64(v)-1) > 1e-5 {
+			t.Errorf("inside: coverage of pixel %d is %g, want 1", j, v)
+		}
 	}
 }
 

@@ -76,3 +76,28 @@ func (k kernel) sharpness() float64 {
 	}
 	return most
 }
+
+// Coverage returns, for every reference pixel, the share of the scene it sees
+// that lies inside the window, blur included: 1 inside, 0 for a pixel that
+// sees nothing of the window, and within some per cent of 1 near the edge
+// inside, where the interpolation reaches out. Where it is not 1, light of the
+// scene outside the window reaches the pixel and is not modelled.
+func (m *Model) Coverage() []float32 {
+	c := m.g.View.Coverage()
+	if m.r.x.identity() && m.r.y.identity() {
+		return c
+	}
+	// The sensor's own edge must not look like the window's: divide by the
+	// blur of a plane of ones.
+	n := len(c)
+	out, tmp, ones := make([]float32, n), make([]float32, n), make([]float32, n)
+	for j := range ones {
+		ones[j] = 1
+	}
+	m.r.apply(out, tmp, c)
+	m.r.apply(c, tmp, ones)
+	for j := range out {
+		out[j] /= c[j]
+	}
+	return out
+}

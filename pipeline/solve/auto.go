@@ -30,6 +30,10 @@ const (
 // answer after a rough solve and again after a full one; weights taken from
 // single counts would favour pixels that by chance counted few.
 //
+// Light of the scene outside the window reaches reference pixels at its edge
+// and is not modelled; those pixels get the square of as much as it may be
+// added to their variance.
+//
 // Pixels that stand out of their neighbours further than the arm's blur allows
 // for any scene (cosmic rays, new hot pixels) are masked first.
 //
@@ -89,6 +93,9 @@ func (e *engine) firstWeights(p *Problem) (light bool, spikes int) {
 		smooth(mean, weight, v.a.data, v.a.vari, v.rows, v.cols)
 		if v.a.lit(v.n, mean, weight) {
 			light = true
+		}
+		if v.a == &e.r {
+			v.a.setEdge(e.m.Coverage(), mean)
 		}
 		v.a.weigh(v.n, mean)
 		spikes += v.a.spikes(v.cols, v.sharp)

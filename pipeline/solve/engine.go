@@ -53,6 +53,7 @@ type band struct {
 // planes and their inverse for the dual.
 type arm struct {
 	data, vari []float32 // vari ≤ 0: masked, and data is 0
+	edge       []float32 // part of the variance, see setEdge
 	dual       []float32
 	sigma, inv []float32 // dual step and 1/(1 + σ·vari); both 0 where masked
 	rowSum     []float32
@@ -105,7 +106,7 @@ func newEngine(m *optics.Model, workers int) *engine {
 
 func newArm(n int) arm {
 	f := func() []float32 { return make([]float32, n) }
-	return arm{data: f(), vari: f(), dual: f(), sigma: f(), inv: f(), rowSum: f(), bar: f(), now: f(), tmp: f(), plane: f(), cast: f()}
+	return arm{data: f(), vari: f(), edge: f(), dual: f(), sigma: f(), inv: f(), rowSum: f(), bar: f(), now: f(), tmp: f(), plane: f(), cast: f()}
 }
 
 func (e *engine) newBand(y0, y1 int) *band {

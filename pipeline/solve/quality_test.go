@@ -212,3 +212,34 @@ func coarse(tb testing.TB, p Problem, truth []float32, n int) (Problem, []float3
 	}
 	return q, small
 }
+
+// A bright scene that goes on outside the window does not spoil the inside.
+func TestSceneBeyondTheWindow(t *testing.T) {
+	s := newStation(16, 48, 48)
+	s.beyond = 10
+	wide := func(t, x, y float64) float64 {
+		return (.6 + .3*math.Sin(t/3+x/10)) * gauss((x-20)*(x-20)+(y-25)*(y-25), 20)
+	}
+	p, truth := s.shot(t, wide, 500, 1)
+	r, err := Auto(context.Background(), p, Options{Workers: 2})
+	if err != nil {
+		t.Fatal(err)
+	}
+	got := psnr(r.X, truth)
+	// The same with edge pixels trusted.
+	for j, n := range r.ReferenceVar {
+		if n > 0 {
+			p.ReferenceVar[j] = max(r.ReferenceModel[j], 0) + float32(s.read*s.read)
+		}
+	}
+	copy(p.StreakVar, r.StreakVar)
+	trusting, err := Solve(context.Background(), p, nil, Options{Workers: 2})
+	if err != nil {
+		t.Fatal(err)
+	}
+	t.Logf("%.2f dB, χ² %.2f streak, %.2f reference; with edge pixels trusted %.2f dB, χ² %.2f, %.2f",
+		got, r.Chi2Streak, r.Chi2Reference, psnr(trusting.X, truth), trusting.Chi2Streak, trusting.Chi2Reference)
+	if got < psnr(trusting.X, truth)+1 || r.Chi2Reference > 1.5 {
+		t.Errorf("%.2f dB, reference χ² %.2f", got, r.Chi2Reference)
+	}
+}

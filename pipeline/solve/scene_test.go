@@ -61,6 +61,7 @@ type station struct {
 	read        float64
 	h9          [9]float64
 	pad, margin int
+	beyond      int // px that the scene goes on outside the window
 }
 
 func newStation(t, h, w int) station {
@@ -107,16 +108,20 @@ func (s station) shot(tb testing.TB, f movie, peak float64, seed uint64) (Proble
 	v := m.Geometry().View
 	truth := make([]float32, s.t*s.h*s.w)
 	fw, fh := s.w*fine, s.h*fine
+	out := s.beyond * fine
 	streak := newFinePlane(rows*quarters, cols*fine, quarters, fine)
-	still := newFinePlane(fh, fw, fine, fine)
+	still := newFinePlane(fh+2*out, fw+2*out, fine, fine)
 	for q := range s.t * quarters {
-		for py := range fh {
-			for px := range fw {
+		for py := -out; py < fh+out; py++ {
+			for px := -out; px < fw+out; px++ {
 				x, y := (float64(px)+.5)/fine-.5, (float64(py)+.5)/fine-.5
 				l := peak * f((float64(q)+.5)/quarters, x, y) / (fine * fine * quarters)
+				still.pix[(py+out)*still.cols+px+out] += l
+				if px < 0 || py < 0 || px >= fw || py >= fh {
+					continue
+				}
 				j := py/fine*s.w + px/fine
 				truth[q/quarters*s.h*s.w+j] += float32(l)
-				still.pix[py*fw+px] += l
 				// Centre of the quarter: −3/8 … 3/8 px about the frame's own
 				// displacement; a fine point is half a pixel, two quarters.
 				c := float64(s.code[j]) * l / 2
@@ -143,7 +148,7 @@ func (s station) shot(tb testing.TB, f movie, peak float64, seed uint64) (Proble
 		for a := range 16 {
 			u := float64(v.Rect.X+j%rc) + (float64(a%4)+.5)/4 - .5
 			w := float64(v.Rect.Y+j/rc) + (float64(a/4)+.5)/4 - .5
-			ref[j] += s.ratio * jac * still.at(inv[0]*u+inv[1]*w+inv[2], inv[3]*u+inv[4]*w+inv[5]) / 16
+			ref[j] += s.ratio * jac * still.at(inv[0]*u+inv[1]*w+inv[2]+float64(s.beyond), inv[3]*u+inv[4]*w+inv[5]+float64(s.beyond)) / 16
 		}
 	}
 	p.Reference, p.ReferenceVar = measure(ref, s.read, rng)

@@ -2,6 +2,22 @@ package solve
 
 import "math"
 
+// setEdge adds, to the variance of reference pixels that see beyond the window,
+// the square of the light that may come from there: as much as their smoothed
+// frame shows, times the share of their view that lies outside. Where the
+// frame is dark at the window's edge nothing changes.
+func (a *arm) setEdge(coverage, mean []float32) {
+	for j, c := range coverage {
+		if out := 1 - c; out > edgeLeast || out < -edgeLeast {
+			f := out * max(mean[j], 0)
+			a.edge[j] = f * f
+		}
+	}
+}
+
+// edgeLeast is the rounding of a coverage.
+const edgeLeast = 1e-4
+
 // weigh sets an arm's variances from the light it should count. Masked pixels
 // stay masked; a pixel whose variance does not come out positive and finite
 // becomes masked.
@@ -18,7 +34,7 @@ func (a *arm) weigh(n *Noise, light []float32) {
 		if n.Gain != nil {
 			gain = float64(n.Gain[j])
 		}
-		s := float64(n.Read[j]) + float64(gain*l) + float64(n.Floor*n.Floor*l*l)
+		s := float64(n.Read[j]) + float64(a.edge[j]) + float64(gain*l) + float64(n.Floor*n.Floor*l*l)
 		if !(s > 0 && s <= math.MaxFloat32) {
 			a.vari[j], a.data[j], a.dual[j] = -1, 0, 0
 			a.used--
