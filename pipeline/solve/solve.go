@@ -70,7 +70,7 @@ type Options struct {
 	MaxIter int
 
 	// Tol is the relative change per iteration at which a solve has
-	// converged, see the package comment. Default 5e-4. Negative: run
+	// converged, see the package comment. Default 3e-4. Negative: run
 	// MaxIter iterations.
 	Tol float64
 
@@ -155,7 +155,7 @@ func (o Options) withDefaults() Options {
 		o.MaxIter = 600
 	}
 	if o.Tol == 0 {
-		o.Tol = 5e-4
+		o.Tol = 3e-4
 	}
 	return o
 }
