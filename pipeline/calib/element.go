@@ -251,9 +251,13 @@ func (b *elements) binary(p, q *mat.Dense, thorough bool) bool {
 		return 0
 	}, b.e)
 	b.settle(p, q)
-	if stuck := b.misfit2(p, q); thorough && stuck > stuckAt*b.noise && stuck < giveUp*b.signal {
+	for _, hot := range hotParts {
+		stuck := b.misfit2(p, q)
+		if !thorough || stuck < stuckAt*b.noise || stuck > giveUp*b.signal {
+			break
+		}
 		was, lo, hi := mat.DenseCopyOf(b.e), b.lo, b.hi
-		b.anneal(p, q)
+		b.anneal(p, q, hot)
 		b.settle(p, q)
 		if b.misfit2(p, q) > stuck {
 			b.e, b.lo, b.hi = was, lo, hi
@@ -314,6 +318,18 @@ type pool struct {
 	grad   mat.Dense
 	ny, nx int
 	ry, rx int
+
+	holes []hole   // masked pixels, whose part of J is taken off again
+	near  [][]look // by element: how it shows in holes
+}
+
+// hole is a masked pixel; r is the model less what stands in D there.
+type hole struct{ r float64 }
+
+// look is the brightness of an element in a hole.
+type look struct {
+	hole int
+	a    float64
 }
 
 func (b *elements) pool(p, q *mat.Dense) *pool {
@@ -330,7 +346,32 @@ func (b *elements) pool(p, q *mat.Dense) *pool {
 	s.grad.Sub(&s.grad, &bb)
 	s.ny, s.nx = b.e.Dims()
 	s.ry, s.rx = bandwidth(&s.g), bandwidth(&s.f)
+	t.Reset()
+	t.Mul(p, full)
+	s.near = make([][]look, s.ny*s.nx)
+	_, cols := b.d.Dims()
+	for k, ok := range b.mask {
+		if y, x := k/cols, k%cols; !ok && b.rows[y] && b.cols[x] {
+			s.dig(y, x, mat.Dot(t.RowView(y), q.RowView(x))-b.d.At(y, x), p, q)
+		}
+	}
 	return s
+}
+
+// dig adds a hole.
+func (s *pool) dig(y, x int, r float64, p, q *mat.Dense) {
+	seen := false
+	for i := range s.ny {
+		for j := 0; j < s.nx && p.At(y, i) != 0; j++ {
+			if a := p.At(y, i) * q.At(x, j); a != 0 {
+				s.near[i*s.nx+j] = append(s.near[i*s.nx+j], look{len(s.holes), a})
+				seen = true
+			}
+		}
+	}
+	if seen {
+		s.holes = append(s.holes, hole{r})
+	}
 }
 
 // step is the change of an element's value if it is turned over.
@@ -341,20 +382,58 @@ func (s *pool) step(i, j int) float64 {
 	return s.b.hi - s.b.lo
 }
 
-// one is the change of J if element (i, j) is turned over, two if (k, l) is
-// as well.
+// one is the change of J if element (i, j) is turned over.
 func (s *pool) one(i, j int) float64 {
 	d := s.step(i, j)
-	return 2*d*s.grad.At(i, j) + d*d*s.g.At(i, i)*s.f.At(j, j)
+	c := 2*d*s.grad.At(i, j) + d*d*s.g.At(i, i)*s.f.At(j, j)
+	for _, l := range s.near[i*s.nx+j] {
+		c -= 2*d*l.a*s.holes[l.hole].r + d*d*l.a*l.a
+	}
+	return c
 }
 
-func (s *pool) two(i, j, k, l int) float64 {
-	return s.one(i, j) + s.one(k, l) + 2*s.step(i, j)*s.step(k, l)*s.g.At(i, k)*s.f.At(j, l)
+// cross is the part of the change of J that two elements turned over together
+// add to what each does alone.
+func (s *pool) cross(i, j, k, l int) float64 {
+	both := s.g.At(i, k) * s.f.At(j, l)
+	for _, a := range s.near[i*s.nx+j] {
+		for _, b := range s.near[k*s.nx+l] {
+			if a.hole == b.hole {
+				both -= a.a * b.a
+			}
+		}
+	}
+	return 2 * s.step(i, j) * s.step(k, l) * both
+}
+
+// group is the change of J if the elements of a shape at (i, j) are turned
+// over; ok is false where the shape leaves the grid.
+func (s *pool) group(shape [][2]int, i, j int) (c float64, ok bool) {
+	for n, o := range shape {
+		k, l := i+o[0], j+o[1]
+		if k >= s.ny || l < 0 || l >= s.nx {
+			return 0, false
+		}
+		c += s.one(k, l)
+		for _, p := range shape[:n] {
+			c += s.cross(k, l, i+p[0], j+p[1])
+		}
+	}
+	return c, true
+}
+
+func (s *pool) turnGroup(shape [][2]int, i, j int) {
+	for _, o := range shape {
+		s.turn(i+o[0], j+o[1])
+	}
 }
 
 func (s *pool) turn(i, j int) {
 	d := s.step(i, j)
 	s.b.e.Set(i, j, 1-s.b.e.At(i, j))
+	for _, l := range s.near[i*s.nx+j] {
+		s.holes[l.hole].r += d * l.a
+	}
 	for k := max(0, i-s.ry); k <= min(s.ny-1, i+s.ry); k++ {
 		for l := max(0, j-s.rx); l <= min(s.nx-1, j+s.rx); l++ {
 			s.grad.Set(k, l, s.grad.At(k, l)+d*s.g.At(k, i)*s.f.At(j, l))
@@ -362,8 +441,15 @@ func (s *pool) turn(i, j int) {
 	}
 }
 
-// partners are the neighbours with which an element is turned over together.
-var partners = [][2]int{{0, 1}, {1, 0}, {1, 1}, {1, -1}, {0, 2}, {2, 0}}
+// shapes are the groups of elements turned over together: those that the blur
+// hardly tells from none when open and closed alternate in them.
+var shapes = [][][2]int{
+	{{0, 0}},
+	{{0, 0}, {0, 1}}, {{0, 0}, {1, 0}}, {{0, 0}, {1, 1}}, {{0, 0}, {1, -1}},
+	{{0, 0}, {0, 2}}, {{0, 0}, {2, 0}},
+	{{0, 0}, {0, 1}, {0, 2}}, {{0, 0}, {1, 0}, {2, 0}},
+	{{0, 0}, {0, 1}, {1, 0}, {1, 1}},
+}
 
 // flip turns over what lowers J until nothing does. It returns the number of
 // changes.
@@ -373,17 +459,10 @@ func (b *elements) flip(p, q *mat.Dense) (turned int) {
 		was := turned
 		for i := range s.ny {
 			for j := range s.nx {
-				if s.one(i, j) < 0 {
-					s.turn(i, j)
-					turned++
-					continue
-				}
-				for _, o := range partners {
-					k, l := i+o[0], j+o[1]
-					if k < s.ny && l >= 0 && l < s.nx && s.two(i, j, k, l) < -1e-12 {
-						s.turn(i, j)
-						s.turn(k, l)
-						turned += 2
+				for _, shape := range shapes {
+					if c, ok := s.group(shape, i, j); ok && c < -1e-12 {
+						s.turnGroup(shape, i, j)
+						turned++
 						break
 					}
 				}
@@ -396,37 +475,43 @@ func (b *elements) flip(p, q *mat.Dense) (turned int) {
 	return turned
 }
 
-// The cooling of anneal: sweeps over all elements from the temperature at
-// which the present misfit would be noise down to that of the noise.
-const coolSweeps = 120
+// Anneal goes over all elements this often: many times over few, less often
+// over many.
+const (
+	coolMost  = 400
+	coolLeast = 60
+	coolWork  = 2e6 // elements looked at
+)
+
+// hotParts are the temperatures from which annealing begins, parts of what one
+// element costs: all anew, then nearby.
+var hotParts = []float64{0.1, 0.003}
 
 // anneal leaves the local minimum in which flip got stuck: S. Kirkpatrick, C.
 // D. Gelatt, M. P. Vecchi, Optimization by simulated annealing, Science 220
-// (1983) 671–680, with the fixed seed of this line.
-func (b *elements) anneal(p, q *mat.Dense) {
+// (1983) 671–680, with the fixed seed of this line. It cools down to the
+// temperature of the noise.
+func (b *elements) anneal(p, q *mat.Dense, part float64) {
 	rng := rand.New(rand.NewPCG(1, 2))
 	s := b.pool(p, q)
-	hot, cold := 2*max(b.misfit2(p, q), 4*b.noise), 2*max(b.noise, 1e-6*b.signal)
-	for n := range coolSweeps {
+	d := b.hi - b.lo
+	cold := 2 * max(b.noise, 1e-6*b.signal)
+	hot := max(part*d*d*s.g.At(s.ny/2, s.ny/2)*s.f.At(s.nx/2, s.nx/2), 4*cold)
+	sweeps := max(coolLeast, min(coolMost, coolWork/(s.ny*s.nx)))
+	for n := range sweeps {
 		if n%10 == 9 {
 			b.fitLevels(p, q)
 			s = b.pool(p, q)
 		}
-		t := hot * math.Pow(cold/hot, float64(n)/(coolSweeps-1))
+		t := hot * math.Pow(cold/hot, float64(n)/float64(sweeps-1))
 		for range s.ny * s.nx {
 			i, j := rng.IntN(s.ny), rng.IntN(s.nx)
-			if c := s.one(i, j); c < 0 || rng.Float64() < math.Exp(-c/t) {
-				s.turn(i, j)
-				continue
+			shape := shapes[0]
+			if rng.IntN(2) == 0 {
+				shape = shapes[rng.IntN(len(shapes))]
 			}
-			o := partners[rng.IntN(len(partners))]
-			k, l := i+o[0], j+o[1]
-			if k >= s.ny || l < 0 || l >= s.nx {
-				continue
-			}
-			if c := s.two(i, j, k, l); c < 0 || rng.Float64() < math.Exp(-c/t) {
-				s.turn(i, j)
-				s.turn(k, l)
+			if c, ok := s.group(shape, i, j); ok && (c < 0 || rng.Float64() < math.Exp(-c/t)) {
+				s.turnGroup(shape, i, j)
 			}
 		}
 	}
