@@ -16,9 +16,9 @@ import (
 	"unsheard/queue"
 )
 
-// TestBadFiles drops what laboratories drop: each file ends in a clear state
+// TestFaultBadFiles drops what laboratories drop: each file ends in a clear state
 // with a reason in the ledger and on the page, and the service goes on.
-func TestBadFiles(t *testing.T) {
+func TestFaultBadFiles(t *testing.T) {
 	if testing.Short() {
 		t.Skip("long: runs the whole service through its retries")
 	}
@@ -98,10 +98,10 @@ func square(t *testing.T, n int) []byte {
 	return b
 }
 
-// TestKill kills the service without warning at 20 random moments while 200
+// TestFaultKill kills the service without warning at 20 random moments while 200
 // shots are queued. At the end every shot has exactly one whole result, no
 // frame has changed and nothing temporary is left.
-func TestKill(t *testing.T) {
+func TestFaultKill(t *testing.T) {
 	if testing.Short() {
 		t.Skip("long: 200 shots and 20 kills")
 	}

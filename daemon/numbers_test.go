@@ -42,10 +42,10 @@ const (
 // unit deviation.
 var fwhmPerSigma = 2 * math.Sqrt(2*math.Ln2)
 
-// TestNumbers has frames written by another program (tifffile, in several ways)
+// TestEndToEndNumbers has frames written by another program (tifffile, in several ways)
 // into watched folders and compares the results, read by h5py, silx and Octave,
 // with what was put in.
-func TestNumbers(t *testing.T) {
+func TestEndToEndNumbers(t *testing.T) {
 	if testing.Short() {
 		t.Skip("long: reconstructs shots at full size")
 	}

@@ -151,7 +151,7 @@ part_fuzz() {
     while read -r name; do
       if [[ $name != Fuzz* ]]; then continue; fi
       say "fuzz $dir $name for $FUZZTIME"
-      go test -run '^$' -fuzz "^$name\$" -fuzztime "$FUZZTIME" -timeout 10m "$dir" </dev/null
+      go test -run '^$' -fuzz "^$name\$" -fuzztime "$FUZZTIME" -fuzzminimizetime 1x -timeout 10m "$dir" </dev/null
     done <<<"$names"
   done
 }

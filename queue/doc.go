@@ -51,7 +51,8 @@
 // and its end are one transaction each, which also writes the attempt and the
 // shot. The end counts only if the job's row still names the attempt that
 // ended (the fence); otherwise its result is dropped and logged. Every attempt
-// ever started stays in the ledger; River forgets finished jobs after a day.
+// ever started stays in the ledger, but of pauses in a row only the last; River
+// forgets finished jobs after a day.
 //
 // # What survives a crash
 //

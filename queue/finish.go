@@ -67,7 +67,9 @@ func (r *runner) judge(ctx context.Context, t Task, err error) end {
 		return end{outcome: OutcomeInterrupted, work: workQueued, reason: "interrupted: the service was stopped",
 			tell: fmt.Errorf("interrupted: %w", context.Canceled)}
 	case errors.As(err, &later):
-		r.s.log().Warn("a shot must wait", append(fields(t, err), zap.Duration("pause", later.after))...)
+		// Many shots can wait for the same share: the worker, which knows
+		// what is amiss, says so once.
+		r.s.log().Debug("a shot must wait", append(fields(t, err), zap.Duration("pause", later.after))...)
 		return end{outcome: OutcomeLater, work: workLater, reason: firstLine(text), pause: later.after,
 			tell: river.JobSnooze(later.after)}
 	case errors.As(err, &permanent):
@@ -124,12 +126,26 @@ func (s *Store) conclude(ctx context.Context, tx *sql.Tx, job *river.Job[jobArgs
 		if err := s.deliver(ctx, tx, job, t, out); err != nil {
 			return err
 		}
+	case OutcomeLater:
+		if err := foldPauses(ctx, tx, t); err != nil {
+			return err
+		}
 	case OutcomeFailed:
 		s.mu.Lock()
 		s.next[job.ID] = time.Now().Add(e.pause) // River's clock, not ours
 		s.mu.Unlock()
 	}
 	return s.settle(ctx, tx, t.ShotID)
+}
+
+// foldPauses keeps only the last of pauses that follow each other: a share that
+// is away all night must not fill the ledger.
+func foldPauses(ctx context.Context, tx *sql.Tx, t Task) error {
+	_, err := tx.ExecContext(ctx, `
+		delete from attempt where shot_id = ? and pass = ? and outcome = 'later' and id < ? and id > coalesce(
+			(select max(id) from attempt where shot_id = ? and pass = ? and outcome <> 'later' and id < ?), 0)`,
+		t.ShotID, t.Pass, t.AttemptID, t.ShotID, t.Pass, t.AttemptID)
+	return err
 }
 
 func errorText(e end) string {
