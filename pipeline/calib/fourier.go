@@ -94,7 +94,7 @@ func newSpectrum(p plane, pad int) *spectrum {
 	s := &spectrum{p.w, p.h, pad, newFFT2(w, h), make([]complex128, w*h)}
 	for y := range h {
 		for x := range w {
-			s.a[y*w+x] = complex(p.at(reflect(x-pad, p.w), reflect(y-pad, p.h)), 0)
+			s.a[y*w+x] = complex(p.at(mirrored(x-pad, p.w), mirrored(y-pad, p.h)), 0)
 		}
 	}
 	s.f.forward(s.a)

@@ -29,8 +29,8 @@ func (p plane) crop(r Window) plane {
 	return q
 }
 
-// reflect folds an index into 0…n−1 by half-sample symmetry.
-func reflect(i, n int) int {
+// mirrored folds an index into 0…n−1 by half-sample symmetry.
+func mirrored(i, n int) int {
 	for i < 0 || i >= n {
 		if i < 0 {
 			i = -1 - i
@@ -115,7 +115,7 @@ func convolve(src plane, kx, ky []float64, e edge) plane {
 					if e == zero {
 						continue
 					}
-					i = reflect(i, src.w)
+					i = mirrored(i, src.w)
 				}
 				s += k * in[i]
 			}
@@ -130,7 +130,7 @@ func convolve(src plane, kx, ky []float64, e edge) plane {
 				if e == zero {
 					continue
 				}
-				i = reflect(i, src.h)
+				i = mirrored(i, src.h)
 			}
 			for x, v := range tmp.v[i*src.w : (i+1)*src.w] {
 				out[x] += k * v

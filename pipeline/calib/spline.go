@@ -41,10 +41,14 @@ func prefilter(c []float64) {
 	for i := range c {
 		c[i] *= 6
 	}
+	// The mirrored line has period 2n − 2.
 	zk, sum := z, c[0]
-	for k := 1; k < min(n, 30); k++ { // |z|^30 < 1e-17
-		sum += zk * c[k]
+	for k := 1; k < min(2*n-2, 60); k++ { // |z|^60 < 1e-34
+		sum += zk * c[fold(k, n)]
 		zk *= z
+	}
+	if 2*n-2 < 60 {
+		sum /= 1 - math.Pow(z, float64(2*n-2))
 	}
 	c[0] = sum
 	for k := 1; k < n; k++ {
