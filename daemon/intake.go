@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"path"
+	"sync/atomic"
 	"time"
 
 	"go.uber.org/zap"
@@ -38,6 +39,7 @@ type arm struct {
 	name    queue.Arm
 	watcher *watch.Watcher
 	stamper *frame.Stamper
+	last    atomic.Int64 // when a file was taken in, unix ns; 0: not yet
 }
 
 const (
@@ -80,7 +82,7 @@ func newIntake(ctx context.Context, s *config.Station, store *queue.Store, wm *w
 		if err != nil {
 			return nil, err
 		}
-		in.arms[i] = arm{c.name, w, st}
+		in.arms[i].name, in.arms[i].watcher, in.arms[i].stamper = c.name, w, st
 	}
 	return in, nil
 }
@@ -116,6 +118,7 @@ func (in *intake) stamp(ctx context.Context, a *arm, files <-chan watch.File, ou
 			return nil
 		case f = <-files:
 		}
+		a.last.Store(time.Now().UnixNano())
 		q := queue.Frame{Station: in.name, Arm: a.name, Path: f.Rel, Size: f.Size, ModTime: f.ModTime}
 		s, err := a.stamper.Stamp(f.Path, f.ModTime)
 		if err != nil {

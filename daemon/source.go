@@ -54,16 +54,35 @@ func (s *source) Now(ctx context.Context) web.Snapshot {
 	}
 	snap.Attention, snap.More, err = s.attention(ctx, snap.Stations)
 	faults = append(faults, err)
-	shots, err := s.store.Shots(ctx, queue.Filter{Limit: recent,
-		States: []queue.State{queue.StateDone, queue.StateRunning, queue.StatePaired, queue.StateFailed, queue.StateQuarantined}})
+	snap.Recent, err = s.recent(ctx)
 	faults = append(faults, err)
-	for _, sh := range shots {
-		snap.Recent = append(snap.Recent, listedShot(sh))
-	}
 	if err := errors.Join(faults...); err != nil {
 		snap.Fault = err.Error()
 	}
 	return snap
+}
+
+// recent lists the latest shots with a result, and those that were given up.
+// What only waits or runs is in the health line.
+func (s *source) recent(ctx context.Context) (out []web.Shot, err error) {
+	f := queue.Filter{Limit: 4 * recent,
+		States: []queue.State{queue.StateDone, queue.StateRunning, queue.StatePaired, queue.StateFailed, queue.StateQuarantined}}
+	for range 10 { // a long queue lies before the first result: look a few pages down
+		shots, err := s.store.Shots(ctx, f)
+		if err != nil || len(shots) == 0 {
+			return out, err
+		}
+		for _, sh := range shots {
+			if sh.ResultDir != "" || sh.State == queue.StateQuarantined {
+				out = append(out, listedShot(sh))
+			}
+			if len(out) == recent {
+				return out, nil
+			}
+		}
+		f.Before, f.Limit = shots[len(shots)-1].Cursor(), 200
+	}
+	return out, nil
 }
 
 func (s *source) queue(ctx context.Context) (web.Queue, error) {
@@ -111,6 +130,9 @@ func (s *source) station(c *config.Station, in *intake) web.Station {
 	for i := range in.arms {
 		w := in.arms[i].watcher.State()
 		f := web.Folder{Arm: string(in.arms[i].name), Path: w.Folder, Condition: string(w.Condition), Since: w.Since}
+		if t := in.arms[i].last.Load(); t != 0 {
+			f.Last = time.Unix(0, t)
+		}
 		if w.Err != nil {
 			f.Detail = w.Err.Error()
 		}

@@ -8,6 +8,7 @@ import (
 	"unsheard/pipeline/cube"
 	"unsheard/pipeline/frame"
 	"unsheard/pipeline/measure"
+	"unsheard/pipeline/solve"
 )
 
 // The passes over a shot.
@@ -82,15 +83,12 @@ type Result struct {
 	Provenance Provenance
 }
 
-// errPermanent marks a fault that another try cannot mend.
-var errPermanent = errors.New("cannot be mended by trying again")
-
 // ErrShape reports a frame whose size does not fit the bundle.
-var ErrShape = fmt.Errorf("frame shape: %w", errPermanent)
+var ErrShape = errors.New("frame does not fit the bundle")
 
 // IsPermanent reports whether another try is pointless.
 func IsPermanent(err error) bool {
-	for _, e := range []error{errPermanent, frame.ErrFormat, frame.ErrTooLarge, frame.ErrEmpty} {
+	for _, e := range []error{ErrShape, frame.ErrFormat, frame.ErrTooLarge, frame.ErrEmpty, solve.ErrMasked} {
 		if errors.Is(err, e) {
 			return true
 		}

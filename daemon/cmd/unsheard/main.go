@@ -13,6 +13,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"unsheard/daemon"
 	"unsheard/pipeline"
 )
 
@@ -30,6 +31,13 @@ var errBad = errors.New("the answer is bad")
 func main() { os.Exit(run()) }
 
 func run() int {
+	if len(os.Args) > 1 && os.Args[1] == daemon.ChildCommand {
+		// A terminal and a service manager signal the whole group. The
+		// parent decides what becomes of its children, by their standard
+		// input.
+		signal.Ignore(os.Interrupt, syscall.SIGTERM)
+		return execute(context.Background(), os.Args[1:], os.Stdin, os.Stdout, os.Stderr)
+	}
 	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
 	defer stop()
 	return execute(ctx, os.Args[1:], os.Stdin, os.Stdout, os.Stderr)
