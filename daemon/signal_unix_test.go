@@ -3,7 +3,9 @@
 package daemon_test
 
 import (
+	"os"
 	"os/exec"
+	"strings"
 	"syscall"
 	"testing"
 	"time"
@@ -26,6 +28,10 @@ func TestFaultInterruptGroup(t *testing.T) {
 	if err := cmd.Start(); err != nil {
 		t.Fatal(err)
 	}
+	await(t, 60*time.Second, "the service running", func() bool {
+		b, err := os.ReadFile(l.path("state", "unsheard.log"))
+		return err == nil && strings.Contains(string(b), `"running"`)
+	})
 	await(t, 60*time.Second, "a shot running after the first was done", func() bool {
 		shots := l.shots(t)
 		return count(shots, queue.StateDone) > 0 && count(shots, queue.StateRunning) > 0
