@@ -148,6 +148,9 @@ func (c *calibration) code() error {
 	if c.r.Outside > litOutside {
 		c.warn(fmt.Sprintf("the open frames are also lit outside the window (%.0f %% of its pixels): stray light, or the window is no rectangle", 100*c.r.Outside))
 	}
+	if err := c.inside(coded, c.s.Coded[0], "coded"); err != nil {
+		return err
+	}
 	f, warn, err := fitCode(coded, c.open, c.b.Window)
 	if err != nil {
 		return fmt.Errorf("code from %q: %w", c.s.Coded[0], err)
@@ -171,6 +174,14 @@ func (c *calibration) code() error {
 	return nil
 }
 
+// inside refuses frames whose light reaches beyond the window.
+func (c *calibration) inside(im image, file, what string) error {
+	if n := overhang(im, c.b.Window); n > overhangMost {
+		return fmt.Errorf("the %s frames of the streak arm (%q) are lit %d px beyond the window of the open frames (%q): check that neither are frames of the other arm and that the sweep was off", what, file, n, c.s.Open[0])
+	}
+	return nil
+}
+
 // floorMost bounds the model-error floor: beyond it the bundle is wrong
 // rather than imprecise.
 const floorMost = 0.05
@@ -183,6 +194,9 @@ func (c *calibration) register() error {
 	}
 	r, rst, err := c.image(c.reference, &b.Reference, c.s.TargetReference, "target")
 	if err != nil {
+		return err
+	}
+	if err := c.inside(s, c.s.TargetStreak[0], "target"); err != nil {
 		return err
 	}
 	sigma := [2]float64{b.Streak.OpticalX.Value, b.Streak.OpticalY.Value}

@@ -101,7 +101,7 @@ func TestPairFaults(t *testing.T) {
 	for _, c := range []struct {
 		a, b float32
 		want string
-	}{{100, 160, "equal exposures"}, {-5, -5, "not brighter than the dark frames"}} {
+	}{{100, 160, "equal exposures"}, {-5, -5, "brighter than the dark frames"}} {
 		if _, err := pairLevel(v(c.a), v(c.b), dark, all(100), 1); err == nil || !strings.Contains(err.Error(), c.want) {
 			t.Errorf("levels %g and %g: %v, want %q", c.a, c.b, err, c.want)
 		}

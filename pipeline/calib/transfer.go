@@ -54,6 +54,7 @@ const (
 	gainUpTo      = 0.7
 	linearFrom    = 0.05
 	linearUpTo    = 0.95
+	brighter      = 0.5  // read noises by which a flat must be brighter than the dark frames
 	flickerLimit  = 0.2  // largest relative difference within a pair
 	outlier       = 8    // robust standard deviations beyond which a difference is no noise
 	plateauShare  = 0.1  // part of the pixels at the top that makes a plateau
@@ -87,8 +88,8 @@ func pairLevel(y0, y1 []float32, dark plane, ok []bool, read float64) (Level, er
 	}
 	l.raw = quantile(raw, 0.999)
 	l.full = plateauAt(raw, l.raw, read)
-	if !(l.Mean > 0) || !(m0 > 0 && m1 > 0) {
-		return l, fmt.Errorf("is not brighter than the dark frames: check that the light was on")
+	if !(m0 > brighter*read && m1 > brighter*read) {
+		return l, fmt.Errorf("the frames are %.2g ADU brighter than the dark frames: check that the light was on", l.Mean)
 	}
 	if math.Abs(m0-m1) > flickerLimit*l.Mean {
 		return l, fmt.Errorf("the two frames differ by %.0f %%: a pair needs equal exposures", 100*math.Abs(m0-m1)/l.Mean)
@@ -100,7 +101,9 @@ func pairLevel(y0, y1 []float32, dark plane, ok []bool, read float64) (Level, er
 			d = append(d, c0*(float64(y0[i])-dark.v[i])-c1*(float64(y1[i])-dark.v[i]))
 		}
 	}
-	l.Var, l.Sigma = halfVariance(d)
+	if l.Var, l.Sigma = halfVariance(d); l.Var == 0 && !l.full {
+		return l, fmt.Errorf("the two frames are the same picture: a pair needs two exposures")
+	}
 	l.part = l.Sigma / l.Var
 	return l, nil
 }

@@ -12,6 +12,7 @@ const minWindow = 8
 // Limits by which open frames are judged.
 const (
 	litInside  = 0.97 // part of a window that must be lit
+	darkSigma  = 8    // noises by which the plateau must stand out
 	litOutside = 0.02 // light outside, relative to the window's pixels, that is warned about
 )
 
@@ -20,7 +21,7 @@ const (
 // passes half its height where it stands, whatever the blur.
 func findWindow(open image) (Window, float64, error) {
 	level := plateau(open)
-	if !(level > 0) {
+	if !(level > darkSigma*open.noise()) {
 		return Window{}, 0, fmt.Errorf("the open frames are dark: check that the light was on and the sweep off")
 	}
 	lit := func(x, y int) bool {
@@ -31,7 +32,9 @@ func findWindow(open image) (Window, float64, error) {
 	w.Y, w.H = run(counts(open.h, open.w, func(y, x int) bool { return lit(x, y) }))
 	w.X, w.W = run(counts(open.w, w.H, func(x, y int) bool { return lit(x, w.Y+y) }))
 	for range 2 {
-		w = refine(open, w, level)
+		if w.W >= minWindow && w.H >= minWindow {
+			w = refine(open, w, level)
+		}
 	}
 	if w.W < minWindow || w.H < minWindow {
 		return w, 0, fmt.Errorf("the lit part of the open frames is %d×%d px, expected at least %d×%d: check the light, or set [window] by hand", w.W, w.H, minWindow, minWindow)
@@ -77,6 +80,54 @@ func plateau(im image) float64 {
 		i++
 	}
 	return median(v[i:])
+}
+
+// noise is the rms standard deviation of the good pixels.
+func (im image) noise() float64 {
+	var s float64
+	n := 0
+	for i, ok := range im.ok {
+		if ok {
+			s += im.vari[i]
+			n++
+		}
+	}
+	return math.Sqrt(s / float64(max(n, 1)))
+}
+
+// Overhang: a line outside the window is lit if a fifth of its pixels reach a
+// quarter of the bright end inside.
+const (
+	overhangMost  = 3 // px
+	overhangShare = 0.2
+	overhangLevel = 0.25
+)
+
+// overhang is how far the light of frames with the sweep off reaches beyond
+// the window, px: the count of lit lines on the worst side. Frames of the
+// other arm, or with the sweep on, hang over.
+func overhang(im image, w Window) int {
+	in := im.crop(w)
+	var v []float64
+	for i, ok := range in.ok {
+		if ok {
+			v = append(v, in.v[i])
+		}
+	}
+	if len(v) == 0 {
+		return 0
+	}
+	limit := overhangLevel * quantile(v, 0.9)
+	lit := func(x, y int) bool { return im.ok[y*im.w+x] && im.v[y*im.w+x] > limit }
+	rows := counts(im.h, w.W, func(y, x int) bool { return lit(w.X+x, y) })
+	cols := counts(im.w, w.H, func(x, y int) bool { return lit(x, w.Y+y) })
+	reach := func(c []int, n, from, step int) (k int) {
+		for i := from; i >= 0 && i < len(c) && float64(c[i]) >= overhangShare*float64(n); i += step {
+			k++
+		}
+		return k
+	}
+	return max(reach(rows, w.W, w.Y-1, -1), reach(rows, w.W, w.Y+w.H, 1), reach(cols, w.H, w.X-1, -1), reach(cols, w.H, w.X+w.W, 1))
 }
 
 // counts returns for each of n lines how many of its m pixels are lit.
