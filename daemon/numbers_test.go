@@ -1,7 +1,6 @@
 package daemon_test
 
 import (
-	"encoding/json"
 	"fmt"
 	"math"
 	"os"
@@ -88,17 +87,7 @@ func TestEndToEndNumbers(t *testing.T) {
 
 func compare(t *testing.T, dir string, p packet, umPerPx float64) {
 	t.Helper()
-	b, err := os.ReadFile(filepath.Join(dir, "metrics.json"))
-	if err != nil {
-		t.Fatal(err)
-	}
-	var m struct {
-		Quantities map[string]struct{ Value float64 }
-		Verdict    struct{ Grade string }
-	}
-	if err := json.Unmarshal(b, &m); err != nil {
-		t.Fatal(err)
-	}
+	m := readMetrics(t, dir)
 	speed := math.Hypot(p.vx, p.vy)
 	for _, c := range []struct {
 		name       string

@@ -77,7 +77,8 @@ not run.`,
 		Version:       pipeline.Version,
 		SilenceUsage:  true,
 		SilenceErrors: true,
-		Args:          cobra.NoArgs,
+		Args:          cobra.NoArgs, // says "unknown command", which needs a RunE
+		RunE:          func(cmd *cobra.Command, _ []string) error { return cmd.Help() },
 	}
 	root.CompletionOptions.HiddenDefaultCmd = true
 	root.AddCommand(watchCommand(), demoCommand(), reconstructCommand(), calibrateCommand(),
