@@ -214,6 +214,9 @@ func shownQuantity(name string, q measure.Quantity) web.Quantity {
 	if q.Sigma != nil {
 		out.Sigma = *q.Sigma
 	}
+	if out.Unit == "1" {
+		out.Unit = "" // a plain number
+	}
 	return out
 }
 

@@ -25,7 +25,7 @@ type keyed struct {
 }
 
 // listed names the quantities of the lists, in their order.
-var listed = []string{"peak_time", "fwhm", "rise_10_90", "speed", "speed_scene", "total_light", "arms_ratio", "misfit_streak"}
+var listed = []string{"peak_time", "fwhm", "speed"}
 
 func summarise(res *pipeline.Result) (json.RawMessage, error) {
 	s := summary{Reasons: res.Report.Verdict.Reasons, Seconds: res.Seconds(), Bundle: res.Provenance.BundleID}

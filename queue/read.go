@@ -53,7 +53,7 @@ type Filter struct {
 	Verdict string    // "": all
 	Since   time.Time // taken at or after; zero: no limit
 	Until   time.Time // taken before; zero: no limit
-	Text    string    // part of the name, letter case ignored for A to Z; "": all
+	Text    string    // part of the name or the reason, letter case ignored for A to Z; "": all
 	Before  *Cursor   // only what follows that shot in the list; nil: from the newest
 	Limit   int       // how many; 0: 100
 }
@@ -115,7 +115,7 @@ func (f Filter) where() (string, []any) {
 	}
 	if f.Text != "" {
 		text := strings.NewReplacer(`\`, `\\`, "%", `\%`, "_", `\_`).Replace(strings.ToLower(f.Text))
-		add(`lower(name) like ? escape '\'`, "%"+text+"%")
+		add(`(lower(name) like ? escape '\' or lower(reason) like ? escape '\')`, "%"+text+"%", "%"+text+"%")
 	}
 	if f.Before != nil {
 		add("(taken_ns, id) < (?, ?)", ns(f.Before.Taken), f.Before.ID)

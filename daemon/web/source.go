@@ -174,7 +174,7 @@ type ShotDetail struct {
 // Filter chooses shots. Empty fields choose all.
 type Filter struct {
 	Station, State, Verdict string
-	Text                    string // a part of the name, the reason or an error
+	Text                    string // a part of the name or the reason
 	After                   string // Page.Next of the page before
 	Limit                   int
 }
