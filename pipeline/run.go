@@ -3,6 +3,7 @@ package pipeline
 import (
 	"context"
 	"fmt"
+	"math"
 	"strings"
 	"time"
 
@@ -34,13 +35,12 @@ type shot struct {
 	prov Provenance
 	seen func(Event)
 
-	bundle           *calib.Bundle
-	station          *station
-	streak, ref      *plane
-	refFrame         *calib.Corrected
-	solved           *solve.Result
-	result           *Result
-	expected, expSig float64
+	bundle                *calib.Bundle
+	station               *station
+	streakFrame, refFrame *calib.Corrected
+	streak, ref           *plane
+	solved                *solve.Result
+	result                *Result
 }
 
 // Run does one job. seen, if not nil, is told of every stage as it ends. It
@@ -80,7 +80,7 @@ func (s *shot) load(context.Context) (string, error) {
 	}
 	s.bundle = b
 	s.prov.BundleID, s.prov.BundleFolder, s.prov.Bundle = b.ID, s.job.Bundle, b.Station
-	s.station, err = newStation(b, s.job.Coarse)
+	s.station, err = newStation(b, s.job.Coarse, true)
 	return fmt.Sprintf("bundle %.12s", b.ID), err
 }
 
@@ -94,11 +94,9 @@ func (s *shot) read(context.Context) (string, error) {
 	if err != nil {
 		return "", err
 	}
-	st, err := correct(&s.bundle.Streak, "streak", s.job.Streak, turned)
-	if err != nil {
+	if s.streakFrame, err = correct(&s.bundle.Streak, "streak", s.job.Streak, turned); err != nil {
 		return "", err
 	}
-	s.streak = s.station.streak(st)
 	if raw, src, err = read(s.job.Reference, s.job.Limits); err != nil {
 		return "", err
 	}
@@ -106,24 +104,69 @@ func (s *shot) read(context.Context) (string, error) {
 	if s.refFrame, err = correct(&s.bundle.Reference, "reference", s.job.Reference, raw); err != nil {
 		return "", err
 	}
-	s.ref = s.station.reference(s.refFrame)
+	s.cut()
 	return fmt.Sprintf("%d + %d bytes", s.prov.Streak.Bytes, s.prov.Reference.Bytes), nil
 }
 
+// reconstruct solves with guard frames first. Where they took up light that the
+// frames do not need them for, it solves again without: an event that begins
+// sharply with the span must not lose light to the frames before it.
 func (s *shot) reconstruct(ctx context.Context) (string, error) {
+	if err := s.solve(ctx); err != nil {
+		return "", err
+	}
+	if _, outside := s.station.cube(s.solved.X); outside > suspicious && s.station.lead > 0 {
+		if err := s.withoutGuards(ctx); err != nil {
+			return "", err
+		}
+	}
+	r := s.solved
+	return fmt.Sprintf("%s after %d iterations, lambda %.3g", r.Status, r.Iterations, r.Lambda), nil
+}
+
+// suspicious is the share of light in the guard frames from which on it is
+// asked whether they are needed.
+const suspicious = 0.005
+
+// withoutGuards keeps the solution without guard frames if it explains the
+// frames as well: to within three deviations of the reduced chi-square, √(2/N).
+func (s *shot) withoutGuards(ctx context.Context) error {
+	guarded := *s
+	var err error
+	if s.station, err = newStation(s.bundle, s.job.Coarse, false); err != nil {
+		return err
+	}
+	s.cut()
+	if err := s.solve(ctx); err != nil {
+		return err
+	}
+	n := float64(s.solved.UsedStreak + s.solved.UsedReference)
+	if s.solved.Chi2 > guarded.solved.Chi2+3*math.Sqrt(2/n) {
+		s.station, s.streak, s.ref, s.solved = guarded.station, guarded.streak, guarded.ref, guarded.solved
+	}
+	return nil
+}
+
+func (s *shot) solve(ctx context.Context) error {
 	p := solve.Problem{Model: s.station.model,
 		Streak: s.streak.pe, StreakVar: s.streak.vari, Reference: s.ref.pe, ReferenceVar: s.ref.vari,
 		StreakNoise:    &solve.Noise{Read: s.streak.readVar, Gain: s.streak.slope, Floor: s.bundle.Streak.Floor},
 		ReferenceNoise: &solve.Noise{Read: s.ref.readVar, Gain: s.ref.slope, Floor: s.bundle.Reference.Floor}}
 	res, err := solve.Auto(ctx, p, solve.Options{Workers: s.job.Workers})
 	if err != nil {
-		return "", fmt.Errorf("shot %s: %w", s.job.Shot, err)
+		return fmt.Errorf("shot %s: %w", s.job.Shot, err)
 	}
 	if res.Status == solve.Cancelled {
-		return "", context.Cause(ctx)
+		return context.Cause(ctx)
 	}
 	s.solved = res
-	return fmt.Sprintf("%s after %d iterations, lambda %.3g", res.Status, res.Iterations, res.Lambda), nil
+	return nil
+}
+
+// cut cuts the planes of the model out of the corrected frames.
+func (s *shot) cut() {
+	s.streak = s.station.streak(s.streakFrame)
+	s.ref = s.station.reference(s.refFrame)
 }
 
 func (s *shot) measure(context.Context) (string, error) {

@@ -24,10 +24,11 @@ type station struct {
 	first  float64
 }
 
-// newStation builds the model for cubes n times coarser than the window.
-func newStation(b *calib.Bundle, n int) (*station, error) {
+// newStation builds the model for cubes n times coarser than the window, with
+// guard frames or without.
+func newStation(b *calib.Bundle, n int, guarded bool) (*station, error) {
 	fineLead := n * ((guard + n - 1) / n)
-	if b.Frames == 1 {
+	if b.Frames == 1 || !guarded {
 		fineLead = 0 // a single frame has no neighbours to tell apart
 	}
 	span := (b.Frames + n - 1) / n
