@@ -43,6 +43,13 @@ func (e *engine) dataStep() {
 			e.s.out(e.castS, j-nr)
 		}
 	})
+	e.backView()
+	e.s.total()
+	e.r.total()
+}
+
+// backView is the transposed view of the reference dual.
+func (e *core) backView() {
 	view := &e.view
 	e.each(chunks(e.h), func(j int) {
 		lo, hi := j*chunkRows*e.w, min((j+1)*chunkRows, e.h)*e.w
@@ -51,8 +58,6 @@ func (e *engine) dataStep() {
 			e.backR[i] *= e.r.scale
 		}
 	})
-	e.s.total()
-	e.r.total()
 }
 
 // limits returns the rows of chunk j.
@@ -77,7 +82,7 @@ func (e *engine) streakIn(j int) {
 	a.spread.Along(a.tmp, a.plane, lo, hi)
 }
 
-func (e *engine) referenceIn(j int) {
+func (e *core) referenceIn(j int) {
 	a := &e.r
 	lo, hi := a.limits(j)
 	e.view.ApplyRange(a.plane, e.sum, lo*a.spread.Cols, hi*a.spread.Cols)

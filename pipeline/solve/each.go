@@ -7,7 +7,7 @@ import (
 
 // each calls f(0) … f(n−1) on up to e.workers goroutines and returns when all
 // have returned.
-func (e *engine) each(n int, f func(int)) {
+func (e *core) each(n int, f func(int)) {
 	if e.workers <= 1 || n <= 1 {
 		for j := range n {
 			f(j)

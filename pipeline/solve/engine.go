@@ -6,7 +6,24 @@ import (
 	"unsheard/pipeline/optics"
 )
 
-// engine holds the state of the primal-dual loop. Its bands are worked in
+// core holds the two arms' data and duals, and what both loops, over voxels
+// and over coefficients, do with them.
+type core struct {
+	m             *optics.Model
+	t, h, w, step int
+	pad, cols     int
+	own, col      []float32 // 1/τ of a voxel = C·col + own, on the window and the padded plane
+	s, r          arm
+	view          optics.View
+	castS         []float32 // B_sᵀ y_s on the padded plane
+	backR         []float32 // (a·B_r V)ᵀ y_r on the window
+	sum           []float32 // Σ_k of the extrapolated cube, on the window
+	zero          []float32
+	workers       int
+	light         float64 // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
+}
+
+// engine is the primal-dual loop over voxels. Its bands are worked in
 // parallel; everything a result depends on is fixed by the shape, so the
 // number of workers changes no bit.
 //
@@ -20,21 +37,10 @@ import (
 // Part 1 reads duals of the row above its band; those are written in part 2
 // only, from copies of the extrapolated rows on both sides of the edge.
 type engine struct {
-	m             *optics.Model
-	t, h, w, step int
-	pad, cols     int
-	bands         []*band
-	own, col      []float32 // 1/τ = C·col + own, on the window and the padded plane
-	s, r          arm
-	view          optics.View
-	castS         []float32 // B_sᵀ y_s on the padded plane
-	backR         []float32 // (a·B_r V)ᵀ y_r on the window
-	sum           []float32 // Σ_k of the extrapolated cube, on the window
-	zero          []float32
-	alpha, sigma  float32
-	lambda        float32
-	workers       int
-	light         float64 // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
+	*core
+	bands        []*band
+	alpha, sigma float32
+	lambda       float32
 }
 
 // band is a range of rows y0 ≤ y < y1 of the cube, stored plane after plane.
@@ -78,11 +84,11 @@ func bandRows(h int) int {
 	return 32
 }
 
-func newEngine(m *optics.Model, workers int) *engine {
+func newCore(m *optics.Model, workers int) *core {
 	g := m.Geometry()
 	rows, cols := m.StreakShape()
 	rr, rc := m.ReferenceShape()
-	e := &engine{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers}
+	e := &core{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers}
 	e.view = g.View
 	e.own, e.col = make([]float32, e.h*e.w), make([]float32, rows*cols)
 	e.castS = make([]float32, rows*cols)
@@ -97,6 +103,14 @@ func newEngine(m *optics.Model, workers int) *engine {
 		a.chunks = make([]float64, chunks(a.spread.Rows))
 	}
 	m.RowSums(e.s.rowSum, e.r.rowSum)
+	return e
+}
+
+func newEngine(m *optics.Model, workers int) *engine { return newCore(m, workers).voxels() }
+
+// voxels returns the loop over voxels, starting in the dark.
+func (c *core) voxels() *engine {
+	e := &engine{core: c}
 	size := bandRows(e.h)
 	for y := 0; y < e.h; y += size {
 		e.bands = append(e.bands, e.newBand(y, min(y+size, e.h)))
@@ -183,6 +197,16 @@ func (a *arm) set(data, vari []float32) {
 // whatever the weights are, so that τ needs one value per window pixel. γ
 // turns dual units (1/photoelectron) into primal ones.
 func (e *engine) steps(gamma, typical, lambda, alpha float64) {
+	e.dataSteps(gamma, typical)
+	for j := range e.own {
+		e.own[j] += float32((4 + 2*alpha) * stepMargin / gamma)
+	}
+	e.alpha, e.lambda = float32(alpha), float32(lambda)
+	e.sigma = float32(1 / (gamma * stepMargin * 2 * max(1, alpha)))
+}
+
+// dataSteps sets the data's dual steps and its part of the primal ones.
+func (e *core) dataSteps(gamma, typical float64) {
 	var d [2][]float32
 	for n, a := range []*arm{&e.s, &e.r} {
 		d[n] = make([]float32, len(a.vari))
@@ -198,11 +222,6 @@ func (e *engine) steps(gamma, typical, lambda, alpha float64) {
 	}
 	e.m.BlurStreakAdjoint(e.col, e.s.tmp, d[0])
 	e.m.UnprojectAbs(e.own, d[1])
-	for j := range e.own {
-		e.own[j] += float32((4 + 2*alpha) * stepMargin / gamma)
-	}
-	e.alpha, e.lambda = float32(alpha), float32(lambda)
-	e.sigma = float32(1 / (gamma * stepMargin * 2 * max(1, alpha)))
 }
 
 const (

@@ -59,7 +59,8 @@ const (
 type Options struct {
 	// Lambda is the weight of total variation for a cube in units of its
 	// Sigma, so dimensionless. Solve: negative means 0, 0 means
-	// DefaultLambda. Auto finds it and takes this as its start.
+	// DefaultLambda. Auto finds it; should it fall back to voxels, this is
+	// the start of its search there.
 	Lambda float64
 
 	// Alpha is the weight of change in time against change in space,
@@ -111,6 +112,10 @@ type Result struct {
 
 	Iterations    int // of all solves
 	Lambda, Alpha float64
+
+	// Spacing is the distance of the splines' knots in time (frames), y and
+	// x (pixels); 0 if the cube is the voxels' own.
+	Spacing [3]float64
 
 	// Sigma is the typical standard deviation of a lit pixel,
 	// photoelectrons, that Lambda is stated against: the weight in
@@ -204,14 +209,26 @@ func Solve(ctx context.Context, p Problem, x0 []float32, o Options) (*Result, er
 	}
 	e.load(x0)
 	res := &Result{Lambda: o.Lambda, Alpha: o.Alpha, Sigma: typicalSigma(&e.s, &e.r)}
-	res.Status = e.run(ctx, res, o)
-	e.finish(res, &p)
+	res.Status = e.run(ctx, e, res, o)
+	e.finish(e, res, &p)
 	return res, nil
 }
 
+// loop is a primal-dual loop on a core.
+type loop interface {
+	// steps sets the step sizes, the weight of total variation, 1 over
+	// photoelectrons, and that of its change in time.
+	steps(gamma, typical, weight, alpha float64)
+	// iterate does one iteration; with count it also returns Σ|v − x|, Σ v
+	// and Σ v² of the primal step v.
+	iterate(count bool) (dx, total, square float64)
+	// store writes the cube.
+	store(x []float32)
+}
+
 // run iterates until the stopping rule holds.
-func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
-	e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha)
+func (e *core) run(ctx context.Context, l loop, res *Result, o Options) Status {
+	l.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha)
 	number := 0
 	if n := len(res.Trajectory); n > 0 {
 		number = res.Trajectory[n-1].Solve + 1
@@ -223,7 +240,7 @@ func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
 			return Cancelled
 		}
 		count := it%CheckEvery == 0 || it == o.MaxIter
-		dx, total, square := e.iterate(count)
+		dx, total, square := l.iterate(count)
 		res.Iterations++
 		if !count {
 			continue
@@ -231,7 +248,7 @@ func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
 		now := Progress{Solve: number, Iteration: it, Lambda: res.Lambda, Change: dx / max(total, 1),
 			Streak: e.s.chi2 / max(1, float64(e.s.used)), Reference: e.r.chi2 / max(1, float64(e.r.used))}
 		if e.light = square / max(total, 1); it == tuneAt || it == 3*tuneAt {
-			e.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha)
+			l.steps(e.gamma(res.Sigma), res.Sigma, res.Lambda/res.Sigma, o.Alpha)
 		}
 		res.Trajectory = append(res.Trajectory, now)
 		if o.Recorder != nil {
@@ -252,7 +269,7 @@ func (e *engine) run(ctx context.Context, res *Result, o Options) Status {
 // that of its duals (Chambolle & Pock 2011, sect. 3). A lit voxel holds about
 // e.light, and duals are of order 1/sigma. Before anything is known sigma
 // stands for the light.
-func (e *engine) gamma(sigma float64) float64 {
+func (e *core) gamma(sigma float64) float64 {
 	if e.light <= 0 {
 		return sigma * sigma
 	}
@@ -270,9 +287,9 @@ const tuneAt = 30
 // CheckEvery is the number of iterations between two looks at the change.
 const CheckEvery = 10
 
-func (e *engine) finish(res *Result, p *Problem) {
+func (e *core) finish(l loop, res *Result, p *Problem) {
 	res.X = make([]float32, e.t*e.h*e.w)
-	e.store(res.X)
+	l.store(res.X)
 	res.StreakModel, res.ReferenceModel = make([]float32, len(e.s.data)), make([]float32, len(e.r.data))
 	e.m.Forward(res.StreakModel, res.ReferenceModel, res.X)
 	cs, cr := e.s.chi(res.StreakModel), e.r.chi(res.ReferenceModel)

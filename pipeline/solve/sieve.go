@@ -1,0 +1,384 @@
+package solve
+
+import "math"
+
+// sieve is the primal-dual loop over spline coefficients z, x = B·z with
+// B = Bt⊗By⊗Bx. The cube itself is never stored: with the fine plane of a
+// coarse time, P_j = By·z_j·Bxᵀ, and C∘P_j kept for all j,
+//
+//	E[m] = Σ_j Σ_k Bt[k][j]·(C∘P_j)[m − k·step]
+//	Σ_k x = By·(Σ_j (Σ_k Bt[k][j])·z_j)·Bxᵀ
+//
+// and the adjoint takes the code out of the sum over k the same way. An
+// iteration goes in phases with barriers between them:
+//
+//  1. per coarse time j: cast the duals back, primal step, C∘P_j (plane)
+//  2. streak: gather E, blur along rows; the reference's sum; duals of the
+//     differences (inward)
+//  3. reference: view, blur along rows; streak: blur along columns, dual
+//     step, transposed blur along rows
+//  4. reference: the same; streak: transposed blur along columns
+//  5. reference: transposed blur along columns
+//  6. reference: transposed view
+//  7. reference: Byᵀ·back·Bx
+//
+// Work is shared by coarse times and by chunks of rows, sums run in a fixed
+// order within one of them: the number of workers changes no bit.
+type sieve struct {
+	*core
+	spacing     [3]float64
+	bt, by, bx  basis
+	z, bar, tau []float32 // mt·my·mx
+	p, q, r     []float32 // duals of the differences; nil until a weight asks for them
+	code        []float32
+	lit         []float32 // C∘P_j, mt·H·W
+	work        []float32 // per j: my+1 rows of W
+	grad        []float32 // per j: a row of mx
+	total       []float32 // Σ_j of the extrapolated coefficients, and the reference's gradient
+	back        []float32
+	fine        []float32 // my rows of W for the reference
+	zero        []float32 // mx zeros
+	volume      float64   // voxels per coefficient
+	alpha       float32
+	sigma       float32
+	lambda      float32
+	stats       [][3]float64
+}
+
+func (c *core) sieve(spacing [3]float64) *sieve {
+	s := &sieve{core: c, spacing: spacing, bt: newBasis(c.t, spacing[0]), by: newBasis(c.h, spacing[1]), bx: newBasis(c.w, spacing[2])}
+	n := s.by.m * s.bx.m
+	f := func(n int) []float32 { return make([]float32, n) }
+	s.z, s.bar, s.tau = f(s.bt.m*n), f(s.bt.m*n), f(s.bt.m*n)
+	s.code = c.m.Geometry().Code
+	s.lit, s.work, s.grad = f(s.bt.m*c.h*c.w), f(s.bt.m*(s.by.m+1)*c.w), f(s.bt.m*s.bx.m)
+	s.total, s.back, s.fine, s.zero = f(n), f(n), f(s.by.m*c.w), f(s.bx.m)
+	s.volume = 1
+	for _, h := range spacing {
+		s.volume *= max(1, h)
+	}
+	s.stats = make([][3]float64, s.bt.m)
+	return s
+}
+
+// plane is phase 1 for coarse time j.
+func (s *sieve) plane(j int, count bool) {
+	my, mx, w := s.by.m, s.bx.m, s.w
+	rows := s.castBack(j, s.castS)
+	g := s.grad[j*mx : (j+1)*mx]
+	share := s.bt.sum(j)
+	n := my * mx
+	s.stats[j] = [3]float64{}
+	for r := range my {
+		lo := j*n + r*mx
+		s.bx.down(g, rows[r*w:(r+1)*w])
+		add1(g, share, s.back[r*mx:(r+1)*mx])
+		if s.lambda > 0 {
+			up, before := s.zero, s.zero
+			if r > 0 {
+				up = s.q[lo-mx : lo]
+			}
+			if j > 0 {
+				before = s.r[lo-n : lo-n+mx]
+			}
+			diverge(g, s.p[lo:lo+mx], s.q[lo:lo+mx], up, s.r[lo:lo+mx], before, s.alpha)
+		}
+		z, bar := s.z[lo:lo+mx], s.bar[lo:lo+mx]
+		project(z, bar, g, s.tau[lo:lo+mx])
+		if count {
+			d, t, t2 := change(bar, z)
+			s.stats[j][0] += d
+			s.stats[j][1] += t
+			s.stats[j][2] += t2
+		}
+	}
+	s.spreadOut(j, s.bar)
+	for y := range s.h {
+		at := (j*s.h + y) * w
+		mul(s.lit[at:at+w], s.code[y*w:(y+1)*w])
+	}
+}
+
+// castBack returns Byᵀ·(C∘Σ_k Bt[k][j]·cast[· + k·step]), my rows of W.
+func (s *sieve) castBack(j int, cast []float32) []float32 {
+	w, stride := s.w, s.step*s.cols
+	work := s.work[j*(s.by.m+1)*w:][:(s.by.m+1)*w]
+	rows, q := work[:s.by.m*w], work[s.by.m*w:]
+	clear(rows)
+	for y := range s.h {
+		clear(q)
+		fir(q, s.bt.wt[j], cast, (y+s.pad+s.bt.lo[j]*s.step)*s.cols+s.pad, stride)
+		mul(q, s.code[y*w:(y+1)*w])
+		s.by.downRow(rows, q, y, w)
+	}
+	return rows
+}
+
+// spreadOut writes P_j of coefficients v to the plane j of lit.
+func (s *sieve) spreadOut(j int, v []float32) {
+	my, mx, w := s.by.m, s.bx.m, s.w
+	work := s.work[j*(my+1)*w:][:my*w]
+	for r := range my {
+		s.bx.up(work[r*w:(r+1)*w], v[(j*my+r)*mx:][:mx])
+	}
+	for y := range s.h {
+		s.by.upRow(s.lit[(j*s.h+y)*w:][:w], work, y, w)
+	}
+}
+
+// gather writes E of the planes of lit to rows of the streak plane and blurs
+// it along rows.
+func (s *sieve) gather(chunk int) {
+	a := &s.s
+	lo, hi := a.limits(chunk)
+	clear(a.plane[lo*s.cols : hi*s.cols])
+	for r := lo; r < hi; r++ {
+		m := r - s.pad
+		if m < 0 || m > s.h-1+(s.t-1)*s.step {
+			continue
+		}
+		dst := a.plane[r*s.cols+s.pad:][:s.w]
+		k0, k1 := 0, min(s.t-1, m/s.step)
+		if over := m - s.h + 1; over > 0 {
+			k0 = (over + s.step - 1) / s.step
+		}
+		for j, wt := range s.bt.wt {
+			a0 := max(k0, s.bt.lo[j])
+			a1 := min(k1, s.bt.lo[j]+len(wt)-1)
+			if a0 <= a1 {
+				fir(dst, wt[a0-s.bt.lo[j]:a1-s.bt.lo[j]+1], s.lit, (j*s.h+m-a0*s.step)*s.w, -s.step*s.w)
+			}
+		}
+	}
+	a.spread.Along(a.tmp, a.plane, lo, hi)
+}
+
+// collapse writes Σ_k x of coefficients v to the window plane sum.
+func (s *sieve) collapse(v []float32) {
+	my, mx, w := s.by.m, s.bx.m, s.w
+	clear(s.total)
+	for j := range s.bt.m {
+		add1(s.total, s.bt.sum(j), v[j*my*mx:(j+1)*my*mx])
+	}
+	for r := range my {
+		s.bx.up(s.fine[r*w:(r+1)*w], s.total[r*mx:(r+1)*mx])
+	}
+	for y := range s.h {
+		s.by.upRow(s.sum[y*w:(y+1)*w], s.fine, y, w)
+	}
+}
+
+// condense writes Byᵀ·src·Bx of a window plane to back.
+func (s *sieve) condense(src []float32) {
+	w, mx := s.w, s.bx.m
+	clear(s.fine)
+	for y := range s.h {
+		s.by.downRow(s.fine, src[y*w:(y+1)*w], y, w)
+	}
+	for r := range s.by.m {
+		s.bx.down(s.back[r*mx:(r+1)*mx], s.fine[r*w:(r+1)*w])
+	}
+}
+
+// inward is the dual step of the differences of coarse time j.
+func (s *sieve) inward(j int) {
+	my, mx := s.by.m, s.bx.m
+	n := my * mx
+	for r := range my {
+		lo := j*n + r*mx
+		b := s.bar[lo : lo+mx]
+		down, next := b, b
+		if r+1 < my {
+			down = s.bar[lo+mx : lo+2*mx]
+		}
+		if j+1 < s.bt.m {
+			next = s.bar[lo+n : lo+n+mx]
+		}
+		dual(s.p[lo:lo+mx], s.q[lo:lo+mx], s.r[lo:lo+mx], b, down, next, s.alpha, s.sigma, s.lambda)
+	}
+}
+
+func (s *sieve) iterate(count bool) (dx, total, square float64) {
+	ns, nr, planes := len(s.core.s.chunks), len(s.core.r.chunks), s.bt.m
+	s.each(planes, func(j int) { s.plane(j, count) })
+	if s.lambda <= 0 {
+		planes = 0
+	}
+	s.each(1+ns+planes, func(j int) {
+		switch {
+		case j == 0:
+			s.collapse(s.bar)
+		case j <= ns:
+			s.gather(j - 1)
+		default:
+			s.inward(j - 1 - ns)
+		}
+	})
+	s.each(nr+ns, func(j int) {
+		if j < nr {
+			s.referenceIn(j)
+		} else {
+			s.core.s.middle(j - nr)
+		}
+	})
+	s.each(nr+ns, func(j int) {
+		if j < nr {
+			s.core.r.middle(j)
+		} else {
+			s.core.s.out(s.castS, j-nr)
+		}
+	})
+	s.each(nr, func(j int) { s.core.r.out(s.core.r.plane, j) })
+	s.backView()
+	s.condense(s.backR)
+	s.core.s.total()
+	s.core.r.total()
+	for _, v := range s.stats {
+		dx += v[0]
+		total += v[1]
+		square += v[2]
+	}
+	return dx, total, square
+}
+
+// steps sets the step sizes as engine.steps does, for the operator composed
+// with B; B is not negative and its rows sum to 1. A difference of
+// coefficients weighs as much as the voxels of one.
+func (s *sieve) steps(gamma, typical, lambda, alpha float64) {
+	s.dataSteps(gamma, typical)
+	s.condense(s.own)
+	my, mx, w := s.by.m, s.bx.m, s.w
+	tv := float32(0)
+	if lambda > 0 {
+		tv = float32(s.volume * (4 + 2*alpha) * stepMargin / gamma)
+		if s.p == nil {
+			s.p, s.q, s.r = make([]float32, len(s.z)), make([]float32, len(s.z)), make([]float32, len(s.z))
+		}
+	}
+	s.each(s.bt.m, func(j int) {
+		rows := s.castBack(j, s.col)
+		share := s.bt.sum(j)
+		for r := range my {
+			tau := s.tau[(j*my+r)*mx:][:mx]
+			s.bx.down(tau, rows[r*w:(r+1)*w])
+			add1(tau, share, s.back[r*mx:(r+1)*mx])
+			for i, v := range tau {
+				tau[i] = 0
+				if v+tv > 0 {
+					tau[i] = 1 / (v + tv)
+				}
+			}
+		}
+	})
+	s.condense(s.backR)
+	s.alpha, s.lambda = float32(alpha), float32(lambda*s.volume)
+	s.sigma = float32(s.volume / (gamma * stepMargin * 2 * max(1, alpha)))
+}
+
+// store writes the cube.
+func (s *sieve) store(x []float32) {
+	n := s.h * s.w
+	for j, v := range s.z {
+		s.bar[j] = max(v, 0)
+	}
+	clear(x)
+	for j := range s.bt.m {
+		s.spreadOut(j, s.bar)
+		for k, w := range s.bt.wt[j] {
+			add1(x[(s.bt.lo[j]+k)*n:][:n], w, s.lit[j*n:(j+1)*n])
+		}
+	}
+}
+
+// begin sets the coefficients to those of old, or to 0 if it is nil, and the
+// model's answer to them. The data's duals stay.
+func (s *sieve) begin(old *sieve) {
+	switch {
+	case old == nil:
+		clear(s.z)
+	case old != s:
+		clear(s.z)
+		s.refit(old)
+	}
+	copy(s.bar, s.z)
+	s.each(s.bt.m, func(j int) {
+		s.spreadOut(j, s.bar)
+		for y := range s.h {
+			at := (j*s.h + y) * s.w
+			mul(s.lit[at:at+s.w], s.code[y*s.w:(y+1)*s.w])
+		}
+	})
+	s.collapse(s.bar)
+	a, b := &s.core.s, &s.core.r
+	s.each(len(a.chunks), s.gather)
+	s.each(len(a.chunks), func(j int) {
+		lo, hi := a.limits(j)
+		a.spread.Across(a.now, a.tmp, lo, hi)
+	})
+	s.each(len(b.chunks), s.referenceIn)
+	s.each(len(b.chunks), func(j int) {
+		lo, hi := b.limits(j)
+		b.spread.Across(b.now, b.tmp, lo, hi)
+		for i := lo * b.spread.Cols; i < hi*b.spread.Cols; i++ {
+			b.now[i] *= b.scale
+		}
+	})
+	// The duals may have changed since the last iteration.
+	s.each(len(a.chunks), func(j int) {
+		lo, hi := a.limits(j)
+		a.spreadT.Along(a.cast, a.dual, lo, hi)
+	})
+	s.each(len(a.chunks), func(j int) { a.out(s.castS, j) })
+	s.each(len(b.chunks), func(j int) {
+		lo, hi := b.limits(j)
+		b.spreadT.Along(b.cast, b.dual, lo, hi)
+	})
+	s.each(len(b.chunks), func(j int) { b.out(b.plane, j) })
+	s.backView()
+	s.condense(s.backR)
+}
+
+// refit sets z to the spline of old on the knots of s, axis by axis.
+func (s *sieve) refit(old *sieve) {
+	rt, ry, rx := s.bt.refit(&old.bt), s.by.refit(&old.by), s.bx.refit(&old.bx)
+	nt, ny, nx := old.bt.m, old.by.m, old.bx.m
+	a := make([]float64, nt*ny*s.bx.m)
+	for l := range nt * ny {
+		for i, w := range rx {
+			var v float64
+			for q, c := range w {
+				if c != 0 {
+					v += c * math.Max(float64(old.z[l*nx+q]), 0)
+				}
+			}
+			a[l*s.bx.m+i] = v
+		}
+	}
+	mx, my := s.bx.m, s.by.m
+	b := make([]float64, nt*my*mx)
+	mix(b, a, ry, nt, ny, mx)
+	c := make([]float64, s.bt.m*my*mx)
+	mix(c, b, rt, 1, nt, my*mx)
+	for j, v := range c {
+		if s.tau != nil && v > tiny {
+			s.z[j] = float32(v)
+		}
+	}
+}
+
+// mix writes dst[o][j][i] = Σ_q m[j][q]·src[o][q][i], with q < n and i < w.
+func mix(dst, src []float64, m [][]float64, outer, n, w int) {
+	for o := range outer {
+		for j, wt := range m {
+			out := dst[(o*len(m)+j)*w:][:w]
+			for q, c := range wt {
+				if c == 0 {
+					continue
+				}
+				for i, v := range src[(o*n+q)*w:][:w] {
+					out[i] += c * v
+				}
+			}
+		}
+	}
+}
