@@ -18,7 +18,7 @@ type Level struct {
 	files [2]string
 	raw   float64 // ADU, 99.9 % quantile as recorded
 	mean  float64 // ADU, as recorded
-	part  float64 // Sigma over the true variance
+	part  float64 // relative standard deviation of Var, of Gaussian noise whose variance goes with the light
 	full  bool    // many pixels stand at the top
 	sum   []float64
 }
@@ -96,15 +96,22 @@ func pairLevel(y0, y1 []float32, dark plane, ok []bool, read float64) (Level, er
 	}
 	c0, c1 := l.Mean/m0, l.Mean/m1
 	d := make([]float64, 0, n)
+	var light, light2 float64
 	for i, good := range ok {
 		if good {
-			d = append(d, c0*(float64(y0[i])-dark.v[i])-c1*(float64(y1[i])-dark.v[i]))
+			a, b := c0*(float64(y0[i])-dark.v[i]), c1*(float64(y1[i])-dark.v[i])
+			d = append(d, a-b)
+			v := max((a+b)/2, 0)
+			light += v
+			light2 += v * v
 		}
 	}
 	if l.Var, l.Sigma = halfVariance(d); l.Var == 0 && !l.full {
 		return l, fmt.Errorf("the two frames are the same picture: a pair needs two exposures")
 	}
-	l.part = l.Sigma / l.Var
+	// The variance of a variance from the light alone: taking it from the
+	// differences would give more weight to levels that came out low.
+	l.part = math.Sqrt(2*light2) / light
 	return l, nil
 }
 
@@ -165,7 +172,7 @@ func (t *Transfer) regress() error {
 			if l.Used = l.Note == ""; !l.Used {
 				continue
 			}
-			if t.K > 0 { // a level that came out low by chance must not weigh more for it
+			if t.K > 0 {
 				l.Sigma = l.part * (t.K*l.Mean + base)
 			}
 			w := 1 / (l.Sigma*l.Sigma + t.SigmaDarkVar*t.SigmaDarkVar)
