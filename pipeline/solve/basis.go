@@ -101,12 +101,11 @@ func (b *basis) upRow(dst, src []float32, y, w int) {
 	set4(dst[:w], v[0], v[1], v[2], v[3], s[:w], s[w:2*w], s[2*w:3*w], s[3*w:])
 }
 
-// downRow adds what row y, src, gives to Bᵀ down the columns; dst has m rows
-// of w.
-func (b *basis) downRow(dst, src []float32, y, w int) {
-	f := b.first[y]
-	for a := range b.taps {
-		add1(dst[(f+a)*w:(f+a+1)*w], b.w[b.taps*y+a], src[:w])
+// downRows adds Bᵀ·src to dst, where B works down the columns: dst has m rows of
+// w, src n.
+func (b *basis) downRows(dst, src []float32, w int) {
+	for j, wt := range b.wt {
+		fir(dst[j*w:(j+1)*w], wt, src, b.lo[j]*w, w)
 	}
 }
 

@@ -32,7 +32,7 @@ type sieve struct {
 	p, q, r     []float32 // duals of the differences; nil until a weight asks for them
 	code        []float32
 	lit         []float32 // C∘P_j, mt·H·W
-	work        []float32 // per j: my+1 rows of W
+	work        []float32 // per j: my rows of W
 	grad        []float32 // per j: a row of mx
 	total       []float32 // Σ_j of the extrapolated coefficients, and the reference's gradient
 	back        []float32
@@ -51,7 +51,7 @@ func (c *core) sieve(spacing [3]float64) *sieve {
 	f := func(n int) []float32 { return make([]float32, n) }
 	s.z, s.bar, s.tau = f(s.bt.m*n), f(s.bt.m*n), f(s.bt.m*n)
 	s.code = c.m.Geometry().Code
-	s.lit, s.work, s.grad = f(s.bt.m*c.h*c.w), f(s.bt.m*(s.by.m+1)*c.w), f(s.bt.m*s.bx.m)
+	s.lit, s.work, s.grad = f(s.bt.m*c.h*c.w), f(s.bt.m*s.by.m*c.w), f(s.bt.m*s.bx.m)
 	s.total, s.back, s.fine, s.zero = f(n), f(n), f(s.by.m*c.w), f(s.bx.m)
 	s.volume = 1
 	for _, h := range spacing {
@@ -99,25 +99,25 @@ func (s *sieve) plane(j int, count bool) {
 	}
 }
 
-// castBack returns Byᵀ·(C∘Σ_k Bt[k][j]·cast[· + k·step]), my rows of W.
+// castBack returns Byᵀ·(C∘Σ_k Bt[k][j]·cast[· + k·step]), my rows of W. It uses
+// plane j of lit.
 func (s *sieve) castBack(j int, cast []float32) []float32 {
 	w, stride := s.w, s.step*s.cols
-	work := s.work[j*(s.by.m+1)*w:][:(s.by.m+1)*w]
-	rows, q := work[:s.by.m*w], work[s.by.m*w:]
+	rows, q := s.work[j*s.by.m*w:][:s.by.m*w], s.lit[j*s.h*w:][:s.h*w]
+	clear(q)
 	clear(rows)
 	for y := range s.h {
-		clear(q)
-		fir(q, s.bt.wt[j], cast, (y+s.pad+s.bt.lo[j]*s.step)*s.cols+s.pad, stride)
-		mul(q, s.code[y*w:(y+1)*w])
-		s.by.downRow(rows, q, y, w)
+		fir(q[y*w:(y+1)*w], s.bt.wt[j], cast, (y+s.pad+s.bt.lo[j]*s.step)*s.cols+s.pad, stride)
+		mul(q[y*w:(y+1)*w], s.code[y*w:(y+1)*w])
 	}
+	s.by.downRows(rows, q, w)
 	return rows
 }
 
 // spreadOut writes P_j of coefficients v to the plane j of lit.
 func (s *sieve) spreadOut(j int, v []float32) {
 	my, mx, w := s.by.m, s.bx.m, s.w
-	work := s.work[j*(my+1)*w:][:my*w]
+	work := s.work[j*my*w:][:my*w]
 	for r := range my {
 		s.bx.up(work[r*w:(r+1)*w], v[(j*my+r)*mx:][:mx])
 	}
@@ -172,9 +172,7 @@ func (s *sieve) collapse(v []float32) {
 func (s *sieve) condense(src []float32) {
 	w, mx := s.w, s.bx.m
 	clear(s.fine)
-	for y := range s.h {
-		s.by.downRow(s.fine, src[y*w:(y+1)*w], y, w)
-	}
+	s.by.downRows(s.fine, src, w)
 	for r := range s.by.m {
 		s.bx.down(s.back[r*mx:(r+1)*mx], s.fine[r*w:(r+1)*w])
 	}

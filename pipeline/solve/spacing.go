@@ -10,160 +10,166 @@ type rung struct{ t, s float64 }
 
 func (r rung) spacing() [3]float64 { return [3]float64{r.t, r.s, r.s} }
 
-// volume is the number of voxels per coefficient.
-func (r rung) volume() float64 { return r.t * r.s * r.s }
-
-// rungs are tried from the coarsest to the finest.
-var rungs = []rung{{3, 4.5}, {2.5, 3.5}, {2, 3}, {1.5, 2.5}, {1.5, 2}, {1, 1.5}, {1, 1}}
+// rungs are walked from the coarsest to the finest, each starting from the
+// cube of the one before: what the frames do not tell stays as smooth as it
+// was.
+var rungs = []rung{{3, 4.5}, {2.5, 3.5}, {2, 3}, {1.5, 2.5}, {1.5, 2}, {1.25, 1.5}, {1, 1}}
 
 // timings are the spacings in time tried beside that of a rung.
 var timings = []float64{1, 1.25, 1.5, 2, 2.5, 3, 3.5, 4.5}
 
-// weights of total variation that are tried.
-var weights = []float64{0, weak, 0.1}
-
 const (
-	// weak is the weight with which spacings are compared.
-	weak = 0.03
+	// weak is the weight of total variation with which spacings are
+	// compared; faint and strong are tried for the spacing chosen.
+	faint  = 0.01
+	weak   = 0.03
+	strong = 0.1
 	// trialIter bounds a trial.
 	trialIter = 80
+	// rising is how much more than the least a rung must miss for finer ones
+	// not to be tried.
+	rising = 1.02
+	// slack is how much more than the least, in χ² per pixel, a smoother cube
+	// may miss, at least; see allowed.
+	slack = 0.01
+	// better is how much less another timing or weight must miss.
+	better = 0.997
+	// misfit is the χ² per pixel that is worth a note.
+	misfit = 1.2
 )
 
 // trial is what a spacing and a weight gave.
 type trial struct {
 	rung
 	lambda float64
-	miss   float64 // χ² of the hidden pixels
-	fit    float64 // larger χ² per pixel of the two arms
+	miss   float64 // χ² per hidden pixel
+	from   *sieve  // where it started
+	at     *sieve  // its cube
 }
 
 // search chooses spacing and weight and solves with them.
 func (a *auto) search(ctx context.Context) loop {
-	start := rung{1.5, 2.5}
-	a.at = a.c.sieve(start.spacing())
-	a.at.begin(nil)
 	rough := a.o
 	rough.MaxIter, rough.Tol = min(trialIter, a.o.MaxIter), roughTol*a.o.Tol
+	a.at = a.c.sieve(rungs[3].spacing())
+	a.at.begin(nil)
 	for range 2 {
 		if !a.run(ctx, weak, rough) {
 			return a.at
 		}
 		a.reweigh()
 	}
-	hs, hr := a.c.s.hide(), a.c.r.hide()
-	try := func(r rung, lambda float64) bool {
-		for _, t := range a.tried {
-			if t.rung == r && t.lambda == lambda {
-				return true
-			}
-		}
-		a.move(r)
-		if !a.run(ctx, lambda, rough) {
-			return false
-		}
-		t := trial{rung: r, lambda: lambda, miss: a.c.s.miss(hs) + a.c.r.miss(hr)}
-		t.fit = max(a.c.s.chi2/max(1, float64(a.c.s.used)), a.c.r.chi2/max(1, float64(a.c.r.used)))
-		a.tried = append(a.tried, t)
-		return true
-	}
-	ok := a.descend(try)
-	best := a.best()
-	a.c.s.show(hs)
-	a.c.r.show(hr)
+	best, ok := a.choose(ctx, rough)
 	if !ok {
 		return a.at
 	}
-	a.move(best.rung)
-	if !a.run(ctx, best.lambda, a.o) {
-		return a.at
+	a.move(best.at, best.rung)
+	for range 2 {
+		if !a.run(ctx, best.lambda, a.o) {
+			return a.at
+		}
+		if a.p.StreakNoise == nil && a.p.ReferenceNoise == nil {
+			break
+		}
+		a.reweigh()
 	}
-	a.reweigh()
-	a.run(ctx, best.lambda, a.o)
-	if a.res.Status == Cancelled {
-		return a.at
-	}
-	if best.rung == rungs[len(rungs)-1] && a.chi() > a.target() {
-		a.res.Notes = append(a.res.Notes, fmt.Sprintf("χ² per pixel is %.2f with the finest splines: the cube is the voxels' own", a.chi()))
+	chi := a.chi()
+	if best.s == rungs[len(rungs)-1].s && chi > a.target() {
+		a.res.Notes = append(a.res.Notes, fmt.Sprintf("χ² per pixel is %.2f with the finest splines: the cube is the voxels' own", chi))
 		return a.voxels(ctx)
 	}
-	if chi := a.chi(); chi > misfit {
+	if chi > misfit {
 		a.res.Notes = append(a.res.Notes, fmt.Sprintf("χ² per pixel is %.2f: the model does not describe the frames to within their noise", chi))
 	}
 	return a.at
 }
 
-// misfit is the χ² per pixel that is worth a note.
-const misfit = 1.2
-
-// descend tries rungs from the coarsest on until finer ones predict hidden
-// pixels worse, then other timings, then weights.
-func (a *auto) descend(try func(rung, float64) bool) bool {
-	worse := 0
-	for _, r := range rungs {
-		if !try(r, weak) {
+// choose hides pixels and looks for the spacing and weight that predict them.
+func (a *auto) choose(ctx context.Context, o Options) (best trial, ok bool) {
+	hs, hr := a.c.s.hide(), a.c.r.hide()
+	defer func() {
+		a.c.s.show(hs)
+		a.c.r.show(hr)
+	}()
+	hidden := max(1, float64(len(hs.at)+len(hr.at)))
+	try := func(from *sieve, r rung, lambda float64) bool {
+		a.move(from, r)
+		if !a.run(ctx, lambda, o) {
 			return false
 		}
-		if last := a.tried[len(a.tried)-1]; last.miss > a.least()*(1+tolerance) {
-			if worse++; worse >= 2 && a.tried[0].miss > a.least()*(1+tolerance) {
-				break
-			}
-		} else {
-			worse = 0
+		a.tried = append(a.tried, trial{r, lambda, (a.c.s.miss(hs) + a.c.r.miss(hr)) / hidden, from, a.at})
+		return true
+	}
+	least := 0.
+	var from *sieve
+	for j, r := range rungs {
+		if !try(from, r, weak) {
+			return best, false
+		}
+		from = a.at
+		miss := a.tried[j].miss
+		if j == 0 || miss < least {
+			least = miss
+		} else if miss > least*rising {
+			break
 		}
 	}
-	b := a.best()
+	limit := allowed(least)
+	for _, t := range a.tried {
+		if best = t; t.miss <= limit {
+			break
+		}
+	}
 	for j, t := range timings {
-		if t == b.t {
-			if j > 0 && !try(rung{timings[j-1], b.s}, weak) {
-				return false
-			}
-			if j+1 < len(timings) && !try(rung{timings[j+1], b.s}, weak) {
-				return false
+		if t != best.t {
+			continue
+		}
+		for _, k := range []int{j - 1, j + 1} {
+			if k >= 0 && k < len(timings) && a.c.t > 1 && !try(best.from, rung{timings[k], best.s}, weak) {
+				return best, false
 			}
 		}
+		break
 	}
-	b = a.best()
-	for _, l := range weights {
-		if !try(b.rung, l) {
-			return false
+	best = a.improve(best)
+	for _, l := range []float64{faint, strong} {
+		if !try(best.from, best.rung, l) {
+			return best, false
 		}
 	}
-	return true
+	return a.improve(best), true
 }
 
-// tolerance is how much more than the least a smoother cube may miss.
-const tolerance = 0.03
-
-func (a *auto) least() float64 {
-	least := a.tried[0].miss
-	for _, t := range a.tried {
-		least = min(least, t.miss)
-	}
-	return least
+// allowed is how much a smoother cube may miss. Hidden pixels of a good model miss
+// by a little over 1, and half that excess more is well spent. A large excess is
+// the model's own error, which finer splines fit first and wrongly; then a cube
+// may miss by twice as much.
+func allowed(least float64) float64 {
+	e := least - 1
+	return least + max(slack, e*min(max(3*e, 0.5), 1))
 }
 
-// best is the smoothest trial that misses little more than the least, and of
-// one spacing the weight that misses least.
-func (a *auto) best() trial {
-	limit := a.least() * (1 + tolerance)
-	var b trial
-	for _, t := range a.tried {
-		if t.miss <= limit && (t.volume() > b.volume() || t.rung == b.rung && t.miss < b.miss) {
-			b = t
+// improve returns the last two trials' better one if it is better than b.
+func (a *auto) improve(b trial) trial {
+	limit := b.miss * better
+	for _, t := range a.tried[max(0, len(a.tried)-2):] {
+		if t.s == b.s && t.miss < limit {
+			b, limit = t, t.miss
 		}
 	}
 	return b
 }
 
-// move changes the spacing.
-func (a *auto) move(r rung) {
-	old := a.at
-	if h := r.spacing(); a.at.spacing != h {
-		a.at = a.c.sieve(h)
+// move sets the spacing and starts from a cube.
+func (a *auto) move(from *sieve, r rung) {
+	if from == nil || from.spacing != r.spacing() {
+		a.at = a.c.sieve(r.spacing())
+	} else {
+		a.at = from
 	}
 	clear(a.c.s.dual) // duals of a spacing that does not fit are far off
 	clear(a.c.r.dual)
-	a.at.begin(old)
+	a.at.begin(from)
 }
 
 // run solves with the spacing at hand.
