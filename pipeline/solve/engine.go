@@ -21,6 +21,7 @@ type core struct {
 	zero          []float32
 	workers       int
 	light         float64 // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
+	bench         bench   // of the sieves
 }
 
 // engine is the primal-dual loop over voxels. Its bands are worked in

@@ -26,33 +26,54 @@ import "math"
 // order within one of them: the number of workers changes no bit.
 type sieve struct {
 	*core
-	spacing     [3]float64
-	bt, by, bx  basis
-	z, bar, tau []float32 // mt·my·mx
-	p, q, r     []float32 // duals of the differences; nil until a weight asks for them
-	code        []float32
-	lit         []float32 // C∘P_j, mt·H·W
-	work        []float32 // per j: my rows of W
-	grad        []float32 // per j: a row of mx
-	total       []float32 // Σ_j of the extrapolated coefficients, and the reference's gradient
-	back        []float32
-	fine        []float32 // my rows of W for the reference
-	zero        []float32 // mx zeros
-	volume      float64   // voxels per coefficient
-	alpha       float32
-	sigma       float32
-	lambda      float32
-	stats       [][3]float64
+	spacing    [3]float64
+	bt, by, bx basis
+	z          []float32 // mt·my·mx
+	*bench
+	volume float64 // voxels per coefficient
+	alpha  float32
+	sigma  float32
+	lambda float32
+	stats  [][3]float64
+}
+
+// bench is what a sieve works on and need not keep. One serves all sieves of a
+// core; it is the sieve's that was begun last.
+type bench struct {
+	bar, tau   []float32 // mt·my·mx
+	px, py, pt []float32 // duals of the differences, likewise
+	lit        []float32 // C∘P_j, mt·H·W
+	work       []float32 // per j: my rows of W
+	grad       []float32 // per j: a row of mx
+	total      []float32 // Σ_j of the extrapolated coefficients, my·mx
+	back       []float32 // the reference's gradient, likewise
+	fine       []float32 // my rows of W for the reference
+	none       []float32 // mx zeros
+}
+
+// fit gives every slice its length for s.
+func (b *bench) fit(s *sieve) {
+	n := s.by.m * s.bx.m
+	for _, v := range []struct {
+		p *[]float32
+		n int
+	}{{&b.bar, s.bt.m * n}, {&b.tau, s.bt.m * n}, {&b.px, s.bt.m * n}, {&b.py, s.bt.m * n}, {&b.pt, s.bt.m * n},
+		{&b.lit, s.bt.m * s.h * s.w}, {&b.work, s.bt.m * s.by.m * s.w}, {&b.grad, s.bt.m * s.bx.m},
+		{&b.total, n}, {&b.back, n}, {&b.fine, s.by.m * s.w}, {&b.none, s.bx.m}} {
+		if cap(*v.p) < v.n {
+			*v.p = make([]float32, v.n)
+		}
+		*v.p = (*v.p)[:v.n]
+	}
+	clear(b.px)
+	clear(b.py)
+	clear(b.pt)
+	clear(b.none)
 }
 
 func (c *core) sieve(spacing [3]float64) *sieve {
-	s := &sieve{core: c, spacing: spacing, bt: newBasis(c.t, spacing[0]), by: newBasis(c.h, spacing[1]), bx: newBasis(c.w, spacing[2])}
-	n := s.by.m * s.bx.m
-	f := func(n int) []float32 { return make([]float32, n) }
-	s.z, s.bar, s.tau = f(s.bt.m*n), f(s.bt.m*n), f(s.bt.m*n)
-	s.code = c.m.Geometry().Code
-	s.lit, s.work, s.grad = f(s.bt.m*c.h*c.w), f(s.bt.m*s.by.m*c.w), f(s.bt.m*s.bx.m)
-	s.total, s.back, s.fine, s.zero = f(n), f(n), f(s.by.m*c.w), f(s.bx.m)
+	s := &sieve{core: c, bench: &c.bench, spacing: spacing, bt: newBasis(c.t, spacing[0]), by: newBasis(c.h, spacing[1]), bx: newBasis(c.w, spacing[2])}
+	s.z = make([]float32, s.bt.m*s.by.m*s.bx.m)
 	s.volume = 1
 	for _, h := range spacing {
 		s.volume *= max(1, h)
@@ -66,7 +87,7 @@ func (s *sieve) plane(j int, count bool) {
 	my, mx, w := s.by.m, s.bx.m, s.w
 	rows := s.castBack(j, s.castS)
 	g := s.grad[j*mx : (j+1)*mx]
-	share := s.bt.sum(j)
+	share, code := s.bt.sum(j), s.m.Geometry().Code
 	n := my * mx
 	s.stats[j] = [3]float64{}
 	for r := range my {
@@ -74,14 +95,14 @@ func (s *sieve) plane(j int, count bool) {
 		s.bx.down(g, rows[r*w:(r+1)*w])
 		add1(g, share, s.back[r*mx:(r+1)*mx])
 		if s.lambda > 0 {
-			up, before := s.zero, s.zero
+			up, before := s.none, s.none
 			if r > 0 {
-				up = s.q[lo-mx : lo]
+				up = s.py[lo-mx : lo]
 			}
 			if j > 0 {
-				before = s.r[lo-n : lo-n+mx]
+				before = s.pt[lo-n : lo-n+mx]
 			}
-			diverge(g, s.p[lo:lo+mx], s.q[lo:lo+mx], up, s.r[lo:lo+mx], before, s.alpha)
+			diverge(g, s.px[lo:lo+mx], s.py[lo:lo+mx], up, s.pt[lo:lo+mx], before, s.alpha)
 		}
 		z, bar := s.z[lo:lo+mx], s.bar[lo:lo+mx]
 		project(z, bar, g, s.tau[lo:lo+mx])
@@ -95,7 +116,7 @@ func (s *sieve) plane(j int, count bool) {
 	s.spreadOut(j, s.bar)
 	for y := range s.h {
 		at := (j*s.h + y) * w
-		mul(s.lit[at:at+w], s.code[y*w:(y+1)*w])
+		mul(s.lit[at:at+w], code[y*w:(y+1)*w])
 	}
 }
 
@@ -104,11 +125,12 @@ func (s *sieve) plane(j int, count bool) {
 func (s *sieve) castBack(j int, cast []float32) []float32 {
 	w, stride := s.w, s.step*s.cols
 	rows, q := s.work[j*s.by.m*w:][:s.by.m*w], s.lit[j*s.h*w:][:s.h*w]
+	code := s.m.Geometry().Code
 	clear(q)
 	clear(rows)
 	for y := range s.h {
 		fir(q[y*w:(y+1)*w], s.bt.wt[j], cast, (y+s.pad+s.bt.lo[j]*s.step)*s.cols+s.pad, stride)
-		mul(q[y*w:(y+1)*w], s.code[y*w:(y+1)*w])
+		mul(q[y*w:(y+1)*w], code[y*w:(y+1)*w])
 	}
 	s.by.downRows(rows, q, w)
 	return rows
@@ -192,7 +214,7 @@ func (s *sieve) inward(j int) {
 		if j+1 < s.bt.m {
 			next = s.bar[lo+n : lo+n+mx]
 		}
-		dual(s.p[lo:lo+mx], s.q[lo:lo+mx], s.r[lo:lo+mx], b, down, next, s.alpha, s.sigma, s.lambda)
+		dual(s.px[lo:lo+mx], s.py[lo:lo+mx], s.pt[lo:lo+mx], b, down, next, s.alpha, s.sigma, s.lambda)
 	}
 }
 
@@ -249,9 +271,6 @@ func (s *sieve) steps(gamma, typical, lambda, alpha float64) {
 	tv := float32(0)
 	if lambda > 0 {
 		tv = float32(s.volume * (4 + 2*alpha) * stepMargin / gamma)
-		if s.p == nil {
-			s.p, s.q, s.r = make([]float32, len(s.z)), make([]float32, len(s.z)), make([]float32, len(s.z))
-		}
 	}
 	s.each(s.bt.m, func(j int) {
 		rows := s.castBack(j, s.col)
@@ -276,6 +295,7 @@ func (s *sieve) steps(gamma, typical, lambda, alpha float64) {
 // store writes the cube.
 func (s *sieve) store(x []float32) {
 	n := s.h * s.w
+	s.fit(s)
 	for j, v := range s.z {
 		s.bar[j] = max(v, 0)
 	}
@@ -298,12 +318,14 @@ func (s *sieve) begin(old *sieve) {
 		clear(s.z)
 		s.refit(old)
 	}
+	s.fit(s)
 	copy(s.bar, s.z)
+	code := s.m.Geometry().Code
 	s.each(s.bt.m, func(j int) {
 		s.spreadOut(j, s.bar)
 		for y := range s.h {
 			at := (j*s.h + y) * s.w
-			mul(s.lit[at:at+s.w], s.code[y*s.w:(y+1)*s.w])
+			mul(s.lit[at:at+s.w], code[y*s.w:(y+1)*s.w])
 		}
 	})
 	s.collapse(s.bar)
@@ -358,7 +380,7 @@ func (s *sieve) refit(old *sieve) {
 	c := make([]float64, s.bt.m*my*mx)
 	mix(c, b, rt, 1, nt, my*mx)
 	for j, v := range c {
-		if s.tau != nil && v > tiny {
+		if v > tiny {
 			s.z[j] = float32(v)
 		}
 	}

@@ -119,6 +119,7 @@ func TestSieveIsB(t *testing.T) {
 				s.z[j] = rng.Float32()
 			}
 			x, want := make([]float32, c.t*c.h*c.w), slow(s, s.z)
+			s.begin(s)
 			s.store(x)
 			for n, v := range want {
 				if math.Abs(float64(v-x[n])) > 1e-5 {
