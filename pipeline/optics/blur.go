@@ -1,6 +1,10 @@
 package optics
 
-import "math"
+import (
+	"math"
+
+	"unsheard/pipeline/solve/row"
+)
 
 // Blur is a Gaussian point spread, continuous, in pixels of the plane it acts
 // on.
@@ -97,6 +101,7 @@ func (k kernel) identity() bool { return len(k.w) == 1 && k.lo == 0 && k.w[0] ==
 type Spread struct {
 	Rows, Cols int
 	x, y       kernel
+	lanes      row.Lanes
 }
 
 // Along does the pass along rows for rows lo ≤ r < hi of src. dst and src are
@@ -107,7 +112,7 @@ func (s *Spread) Along(dst, src []float32, lo, hi int) {
 		if s.x.identity() {
 			copy(out, in)
 		} else {
-			convolveRow(out, in, s.x)
+			s.x.convolve(out, in, s.lanes)
 		}
 	}
 }
@@ -115,20 +120,22 @@ func (s *Spread) Along(dst, src []float32, lo, hi int) {
 // Across does the pass along columns for rows lo ≤ r < hi of dst.
 func (s *Spread) Across(dst, src []float32, lo, hi int) {
 	for r := lo; r < hi; r++ {
+		// Rows r−y.lo−j of src for the taps j that stay inside.
+		first := max(0, r-s.y.lo-(s.Rows-1))
+		end := min(len(s.y.w), r-s.y.lo+1)
 		out := dst[r*s.Cols : (r+1)*s.Cols]
-		clear(out)
-		for j, w := range s.y.w {
-			if q := r - s.y.lo - j; q >= 0 && q < s.Rows {
-				axpy(out, w, src[q*s.Cols:(q+1)*s.Cols])
-			}
+		if first >= end {
+			clear(out)
+			continue
 		}
+		s.lanes.FirSet(out, s.y.w[first:end], src, (r-s.y.lo-first)*s.Cols, -s.Cols)
 	}
 }
 
 // Transpose returns the adjoint. Its passes may be taken in the same order,
 // since they commute.
 func (s *Spread) Transpose() Spread {
-	return Spread{Rows: s.Rows, Cols: s.Cols, x: s.x.flip(), y: s.y.flip()}
+	return Spread{Rows: s.Rows, Cols: s.Cols, x: s.x.flip(), y: s.y.flip(), lanes: s.lanes}
 }
 
 // apply does both passes.
@@ -137,22 +144,28 @@ func (s *Spread) apply(dst, tmp, src []float32) {
 	s.Across(dst, tmp, 0, s.Rows)
 }
 
-func convolveRow(dst, src []float32, k kernel) {
-	clear(dst)
+// convolve writes the convolution of a row, zeros outside. Every sample sums
+// its taps in order; those near the ends have fewer.
+func (k *kernel) convolve(dst, src []float32, lanes row.Lanes) {
 	n := len(dst)
-	for j, w := range k.w {
-		off := k.lo + j
-		a, b := max(off, 0), min(n, n+off)
-		if a < b {
-			axpy(dst[a:b], w, src[a-off:b-off])
-		}
+	lo := min(max(k.lo+len(k.w)-1, 0), n) // from here all taps stay inside,
+	hi := min(max(n+k.lo, lo), n)         // up to here
+	if lo < hi {
+		lanes.FirSet(dst[lo:hi], k.w, src, lo-k.lo, -1)
 	}
+	k.ends(dst, src, 0, lo)
+	k.ends(dst, src, hi, n)
 }
 
-// axpy is dst[i] += w·src[i].
-func axpy(dst []float32, w float32, src []float32) {
-	src = src[:len(dst)]
-	for i, v := range src {
-		dst[i] += float32(w * v)
+// ends is convolve for the samples lo ≤ i < hi near an end.
+func (k *kernel) ends(dst, src []float32, lo, hi int) {
+	for i := lo; i < hi; i++ {
+		var sum float32
+		for j, w := range k.w {
+			if q := i - k.lo - j; q >= 0 && q < len(src) {
+				sum += float32(w * src[q])
+			}
+		}
+		dst[i] = sum
 	}
 }

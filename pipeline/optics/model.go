@@ -3,6 +3,8 @@ package optics
 import (
 	"fmt"
 	"math"
+
+	"unsheard/pipeline/solve/row"
 )
 
 // ErrShape is the panic value for a slice whose length does not fit the
@@ -45,6 +47,19 @@ type Geometry struct {
 	// Ratio is reference photoelectrons per streak photoelectron, for the
 	// same scene with the code open. Default 1.
 	Ratio float64
+
+	// Scalar keeps all that works with the model to plain loops, which give
+	// the same bits as the processor's vector code, several times slower.
+	// Default off.
+	Scalar bool
+}
+
+// Lanes returns the loops that the geometry asks for.
+func (g *Geometry) Lanes() row.Lanes {
+	if g.Scalar {
+		return row.Lanes{}
+	}
+	return row.Best()
 }
 
 // Model is the operator of equations (1) and (2). It is immutable.
@@ -68,11 +83,12 @@ func NewModel(g Geometry) (*Model, error) {
 	if g.View.fwd.start == nil {
 		g.View = Identity(g.W, g.H)
 	}
+	g.View.fwd.lanes, g.View.adj.lanes = g.Lanes(), g.Lanes()
 	m := &Model{g: g, rows: g.H + (g.T-1)*g.Step + 2*g.StreakPad, cols: g.W + 2*g.StreakPad}
-	m.s = Spread{Rows: m.rows, Cols: m.cols, x: newKernel(g.StreakBlur.SigmaX, 0, 0),
+	m.s = Spread{Rows: m.rows, Cols: m.cols, lanes: g.Lanes(), x: newKernel(g.StreakBlur.SigmaX, 0, 0),
 		y: newKernel(g.StreakBlur.SigmaY, float64(g.Step), g.Shift)}
 	m.sT = m.s.Transpose()
-	m.r = Spread{Rows: g.View.Rect.H, Cols: g.View.Rect.W, x: newKernel(g.ReferenceBlur.SigmaX, 0, 0),
+	m.r = Spread{Rows: g.View.Rect.H, Cols: g.View.Rect.W, lanes: g.Lanes(), x: newKernel(g.ReferenceBlur.SigmaX, 0, 0),
 		y: newKernel(g.ReferenceBlur.SigmaY, 0, 0)}
 	return m, nil
 }

@@ -530,7 +530,7 @@ func TestSharpness(t *testing.T) {
 				x[j] = rng.Float32()
 			}
 		}
-		convolveRow(y, x, m.s.x)
+		m.s.x.convolve(y, x, m.s.lanes)
 		for j := 1; j+1 < len(y); j++ {
 			if y[j] > 0 {
 				most = max(most, float64(y[j])/float64(y[j-1]+y[j+1]))

@@ -1,19 +1,16 @@
 package optics
 
-// mul writes dst = S·src; dst has one entry per row.
+import "unsheard/pipeline/solve/row"
+
+// mul writes dst = S·src; dst has one entry per row. The matrix must be laid.
 func (s *sparse) mul(dst, src []float32) { s.mulRange(dst, src, 0, len(dst)) }
 
-func (s *sparse) mulRange(dst, src []float32, lo, hi int) {
-	for r := lo; r < hi; r++ {
-		a, b := s.start[r], s.start[r+1]
-		col, val := s.col[a:b], s.val[a:b]
-		val = val[:len(col)]
-		var sum float32
-		for j, c := range col {
-			sum += float32(val[j] * src[c])
-		}
-		dst[r] = sum
-	}
+func (s *sparse) mulRange(dst, src []float32, lo, hi int) { s.lanes.Mul(s.rows, dst, src, lo, hi) }
+
+// laid lays the matrix out for the loops.
+func (s sparse) laid(cols int, lanes row.Lanes) sparse {
+	s.rows, s.lanes = row.NewSparse(s.start, s.col, s.val, cols), lanes
+	return s
 }
 
 // transpose returns the transposed matrix; cols is the number of columns of
@@ -38,13 +35,16 @@ func (s *sparse) transpose(cols int) sparse {
 	return t
 }
 
-// abs returns the matrix of absolute values.
-func (s *sparse) abs() sparse {
-	v := make([]float32, len(s.val))
-	for j, x := range s.val {
-		v[j] = max(x, -x)
+// mulAbs is mul with the absolute values of the entries.
+func (s *sparse) mulAbs(dst, src []float32) {
+	for r := range dst {
+		var sum float32
+		for j := s.start[r]; j < s.start[r+1]; j++ {
+			v := s.val[j]
+			sum += float32(max(v, -v) * src[s.col[j]])
+		}
+		dst[r] = sum
 	}
-	return sparse{start: s.start, col: s.col, val: v}
 }
 
 // Apply writes the view of the window plane src (H·W) to dst (Rect.H·Rect.W).

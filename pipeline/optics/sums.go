@@ -18,8 +18,7 @@ func (m *Model) UnprojectAbs(dst, src []float32) {
 	n := len(src)
 	tmp := make([]float32, 2*n)
 	m.r.apply(tmp[:n], tmp[n:], src)
-	a := m.g.View.adj.abs()
-	a.mul(dst, tmp[:n])
+	m.g.View.adj.mulAbs(dst, tmp[:n])
 	scale(dst, float32(m.g.Ratio))
 }
 
@@ -46,8 +45,7 @@ func (m *Model) RowSums(rS, rR []float32) {
 		depth[j] = float32(g.T)
 	}
 	tmp := make([]float32, 2*len(rR))
-	a := g.View.fwd.abs()
-	a.mul(tmp[:len(rR)], depth)
+	g.View.fwd.mulAbs(tmp[:len(rR)], depth)
 	m.r.apply(rR, tmp[len(rR):], tmp[:len(rR)])
 	scale(rR, float32(g.Ratio))
 }

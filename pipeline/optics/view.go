@@ -4,6 +4,8 @@ import (
 	"errors"
 	"fmt"
 	"math"
+
+	"unsheard/pipeline/solve/row"
 )
 
 // Rect is a rectangle of sensor pixels.
@@ -26,6 +28,9 @@ type sparse struct {
 	start []int32
 	col   []int32
 	val   []float32
+
+	rows  *row.Sparse // the same; see laid
+	lanes row.Lanes
 }
 
 // NewView makes the view for a homography h (row-major, window pixel centre
@@ -45,7 +50,8 @@ func NewView(h [9]float64, W, H, refW, refH, margin int) (View, error) {
 		return View{}, err
 	}
 	v.fill(inv)
-	v.adj = v.fwd.transpose(W * H)
+	v.adj = v.fwd.transpose(W*H).laid(v.Rect.W*v.Rect.H, row.Best())
+	v.fwd = v.fwd.laid(W*H, row.Best())
 	return v, nil
 }
 
@@ -117,7 +123,7 @@ func project(h [9]float64, x, y float64) (px, py, d float64) {
 // fill writes the rows of (5).
 func (v *View) fill(inv [9]float64) {
 	det := inv[0]*(inv[4]*inv[8]-inv[5]*inv[7]) - inv[1]*(inv[3]*inv[8]-inv[5]*inv[6]) + inv[2]*(inv[3]*inv[7]-inv[4]*inv[6])
-	row := newGather(v.w, v.h)
+	r := newGather(v.w, v.h)
 	v.fwd.start = append(v.fwd.start, 0)
 	for q := range v.Rect.H {
 		for p := range v.Rect.W {
@@ -132,10 +138,10 @@ func (v *View) fill(inv [9]float64) {
 			share := jac / float64(len(us)*len(vs))
 			for _, a := range us {
 				for _, b := range vs {
-					row.add(wx+a*ux+b*vx, wy+a*uy+b*vy, share)
+					r.add(wx+a*ux+b*vx, wy+a*uy+b*vy, share)
 				}
 			}
-			row.flush(&v.fwd)
+			r.flush(&v.fwd)
 		}
 	}
 }

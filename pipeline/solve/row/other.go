@@ -25,10 +25,18 @@ func turnTiles(dst *float32, dstRow, dstStep int, src *float32, srcRow, srcStep,
 	panic(unreached)
 }
 
+func mulBlocks(dst *float32, blocks int, slot *int32, src *float32, base *int32, pick *uint8, w *float32) {
+	panic(unreached)
+}
+
 func projectRow(z, bar, grad, tau *float32, n int, rho, tiny float32) { panic(unreached) }
 
 func divergeRow(grad, p, left, q, up, r, back *float32, n int, alpha float32) { panic(unreached) }
 
-func dualRow(p, q, r, b, ahead, down, next *float32, n int, sigma, sigmaT, lambda, limit, rho, tiny float32) {
+func dualRow(p, q, r, b, down, next *float32, n int, sigma, sigmaT, lambda, limit, rho, tiny float32) {
+	panic(unreached)
+}
+
+func fitRow(dual, now, bar, data, vari, sigma, inv *float32, n int, scale, rho, tiny float32) {
 	panic(unreached)
 }

@@ -39,6 +39,11 @@ func down8(dst *float32, src *float32, m int, first *int32, taps *int32, w *floa
 //go:noescape
 func turnTiles(dst *float32, dstRow int, dstStep int, src *float32, srcRow int, srcStep int, tiles int)
 
+// mulBlocks is dst[i] = 0 + Σ_s w[8s+i]·src[base[s] + pick[8s+i]] for blocks of 8 rows; a block has slot[1] − slot[0] slots s.
+//
+//go:noescape
+func mulBlocks(dst *float32, blocks int, slot *int32, src *float32, base *int32, pick *uint8, w *float32)
+
 // projectRow is Project for n coefficients.
 //
 //go:noescape
@@ -49,7 +54,12 @@ func projectRow(z *float32, bar *float32, grad *float32, tau *float32, n int, rh
 //go:noescape
 func divergeRow(grad *float32, p *float32, left *float32, q *float32, up *float32, r *float32, back *float32, n int, alpha float32)
 
-// dualRow is Dual for n coefficients with right-hand neighbours ahead.
+// dualRow is Dual for n coefficients, n > 0.
 //
 //go:noescape
-func dualRow(p *float32, q *float32, r *float32, b *float32, ahead *float32, down *float32, next *float32, n int, sigma float32, sigmaT float32, lambda float32, limit float32, rho float32, tiny float32)
+func dualRow(p *float32, q *float32, r *float32, b *float32, down *float32, next *float32, n int, sigma float32, sigmaT float32, lambda float32, limit float32, rho float32, tiny float32)
+
+// fitRow is Fit for n pixels.
+//
+//go:noescape
+func fitRow(dual *float32, now *float32, bar *float32, data *float32, vari *float32, sigma *float32, inv *float32, n int, scale float32, rho float32, tiny float32)

@@ -483,18 +483,39 @@ coefficient:
 	MOVLQSX (SI), R9
 	VXORPS  Y0, Y0, Y0
 
-taps:
-	TESTQ        R9, R9
-	JLE          sum
+taps4:
+	CMPQ         R9, $0x04
+	JL           past4
+	VBROADCASTSS (DI), Y1
+	VMULPS       (R8), Y1, Y1
+	VADDPS       Y1, Y0, Y0
+	VBROADCASTSS 4(DI), Y1
+	VMULPS       32(R8), Y1, Y1
+	VADDPS       Y1, Y0, Y0
+	VBROADCASTSS 8(DI), Y1
+	VMULPS       64(R8), Y1, Y1
+	VADDPS       Y1, Y0, Y0
+	VBROADCASTSS 12(DI), Y1
+	VMULPS       96(R8), Y1, Y1
+	VADDPS       Y1, Y0, Y0
+	ADDQ         $0x10, DI
+	ADDQ         $0x00000080, R8
+	SUBQ         $0x04, R9
+	JMP          taps4
+
+past4:
+taps1:
+	CMPQ         R9, $0x01
+	JL           past1
 	VBROADCASTSS (DI), Y1
 	VMULPS       (R8), Y1, Y1
 	VADDPS       Y1, Y0, Y0
 	ADDQ         $0x04, DI
-	ADDQ         $0x20, R8
-	DECQ         R9
-	JMP          taps
+	ADDQ         $0x00000020, R8
+	SUBQ         $0x01, R9
+	JMP          taps1
 
-sum:
+past1:
 	VMOVUPS Y0, (AX)
 	ADDQ    $0x20, AX
 	ADDQ    $0x04, BX
@@ -580,6 +601,49 @@ tile:
 	ADDQ       DX, AX
 	DECQ       R8
 	JMP        tile
+
+done:
+	VZEROUPPER
+	RET
+
+// func mulBlocks(dst *float32, blocks int, slot *int32, src *float32, base *int32, pick *uint8, w *float32)
+// Requires: AVX, AVX2
+TEXT ·mulBlocks(SB), NOSPLIT, $0-56
+	MOVQ dst+0(FP), AX
+	MOVQ blocks+8(FP), CX
+	MOVQ slot+16(FP), DX
+	MOVQ src+24(FP), BX
+	MOVQ base+32(FP), SI
+	MOVQ pick+40(FP), DI
+	MOVQ w+48(FP), R8
+
+block:
+	TESTQ  CX, CX
+	JLE    done
+	MOVL   4(DX), R9
+	SUBL   (DX), R9
+	VXORPS Y0, Y0, Y0
+
+slots:
+	TESTL     R9, R9
+	JLE       sum
+	MOVLQSX   (SI), R10
+	VPMOVZXBD (DI), Y1
+	VPERMPS   (BX)(R10*4), Y1, Y1
+	VMULPS    (R8), Y1, Y1
+	VADDPS    Y1, Y0, Y0
+	ADDQ      $0x04, SI
+	ADDQ      $0x08, DI
+	ADDQ      $0x20, R8
+	DECL      R9
+	JMP       slots
+
+sum:
+	VMOVUPS Y0, (AX)
+	ADDQ    $0x20, AX
+	ADDQ    $0x04, DX
+	DECQ    CX
+	JMP     block
 
 done:
 	VZEROUPPER
@@ -713,84 +777,219 @@ done:
 	VZEROUPPER
 	RET
 
-// func dualRow(p *float32, q *float32, r *float32, b *float32, ahead *float32, down *float32, next *float32, n int, sigma float32, sigmaT float32, lambda float32, limit float32, rho float32, tiny float32)
+// func dualRow(p *float32, q *float32, r *float32, b *float32, down *float32, next *float32, n int, sigma float32, sigmaT float32, lambda float32, limit float32, rho float32, tiny float32)
 // Requires: AVX, AVX2
-TEXT ·dualRow(SB), NOSPLIT, $0-88
+TEXT ·dualRow(SB), NOSPLIT, $0-80
 	MOVQ         p+0(FP), AX
 	MOVQ         q+8(FP), CX
 	MOVQ         r+16(FP), DX
 	MOVQ         b+24(FP), BX
-	MOVQ         ahead+32(FP), SI
-	MOVQ         down+40(FP), DI
-	MOVQ         next+48(FP), R8
-	MOVQ         n+56(FP), R9
-	VBROADCASTSS sigma+64(FP), Y0
-	VBROADCASTSS sigmaT+68(FP), Y1
-	VBROADCASTSS lambda+72(FP), Y2
-	VBROADCASTSS limit+76(FP), Y3
-	VBROADCASTSS rho+80(FP), Y4
-	VBROADCASTSS tiny+84(FP), Y5
+	MOVQ         down+32(FP), SI
+	MOVQ         next+40(FP), DI
+	MOVQ         n+48(FP), R8
+	VBROADCASTSS sigma+56(FP), Y0
+	VBROADCASTSS sigmaT+60(FP), Y1
+	VBROADCASTSS lambda+64(FP), Y2
+	VBROADCASTSS limit+68(FP), Y3
+	VBROADCASTSS rho+72(FP), Y4
+	VBROADCASTSS tiny+76(FP), Y5
 	VPCMPEQD     Y6, Y6, Y6
 	VPSRLD       $0x01, Y6, Y6
+	XORQ         R9, R9
+
+whole:
+	CMPQ      R8, $0x08
+	JLE       rest
+	VMOVUPS   4(BX)(R9*1), Y7
+	VMOVUPS   (BX)(R9*1), Y8
+	VSUBPS    Y8, Y7, Y7
+	VMULPS    Y0, Y7, Y7
+	VMOVUPS   (AX)(R9*1), Y9
+	VADDPS    Y7, Y9, Y7
+	VMULPS    Y7, Y7, Y9
+	VMOVUPS   (SI)(R9*1), Y10
+	VSUBPS    Y8, Y10, Y10
+	VMULPS    Y0, Y10, Y10
+	VMOVUPS   (CX)(R9*1), Y11
+	VADDPS    Y10, Y11, Y10
+	VMULPS    Y10, Y10, Y11
+	VADDPS    Y11, Y9, Y9
+	VMOVUPS   (DI)(R9*1), Y11
+	VSUBPS    Y8, Y11, Y11
+	VMULPS    Y1, Y11, Y11
+	VMOVUPS   (DX)(R9*1), Y8
+	VADDPS    Y11, Y8, Y11
+	VMULPS    Y11, Y11, Y8
+	VADDPS    Y8, Y9, Y9
+	VCMPPS    $0x1e, Y3, Y9, Y8
+	VMOVMSKPS Y8, R10
+	TESTL     R10, R10
+	JZ        inside
+	VSQRTPS   Y9, Y9
+	VDIVPS    Y9, Y2, Y9
+	VMULPS    Y9, Y7, Y12
+	VBLENDVPS Y8, Y12, Y7, Y7
+	VMULPS    Y9, Y10, Y12
+	VBLENDVPS Y8, Y12, Y10, Y10
+	VMULPS    Y9, Y11, Y9
+	VBLENDVPS Y8, Y9, Y11, Y11
+
+inside:
+	VMOVUPS (AX)(R9*1), Y8
+	VSUBPS  Y8, Y7, Y7
+	VMULPS  Y4, Y7, Y7
+	VADDPS  Y7, Y8, Y8
+	VANDPS  Y8, Y6, Y7
+	VCMPPS  $0x15, Y5, Y7, Y7
+	VANDPS  Y8, Y7, Y8
+	VMOVUPS Y8, (AX)(R9*1)
+	VMOVUPS (CX)(R9*1), Y7
+	VSUBPS  Y7, Y10, Y10
+	VMULPS  Y4, Y10, Y10
+	VADDPS  Y10, Y7, Y7
+	VANDPS  Y7, Y6, Y8
+	VCMPPS  $0x15, Y5, Y8, Y8
+	VANDPS  Y7, Y8, Y7
+	VMOVUPS Y7, (CX)(R9*1)
+	VMOVUPS (DX)(R9*1), Y7
+	VSUBPS  Y7, Y11, Y11
+	VMULPS  Y4, Y11, Y11
+	VADDPS  Y11, Y7, Y7
+	VANDPS  Y7, Y6, Y8
+	VCMPPS  $0x15, Y5, Y8, Y8
+	VANDPS  Y7, Y8, Y7
+	VMOVUPS Y7, (DX)(R9*1)
+	ADDQ    $0x20, R9
+	SUBQ    $0x08, R8
+	JMP     whole
+
+rest:
+	MOVQ       $0x00000008, R10
+	SUBQ       R8, R10
+	LEAQ       masks<>+0(SB), R11
+	VMOVUPS    (R11)(R10*4), Y7
+	DECQ       R8
+	MOVQ       $0x00000008, R10
+	SUBQ       R8, R10
+	LEAQ       masks<>+0(SB), R8
+	VMOVUPS    (R8)(R10*4), Y8
+	VMOVAPS    Y8, Y8
+	VMASKMOVPS 4(BX)(R9*1), Y8, Y9
+	VMASKMOVPS (BX)(R9*1), Y7, Y10
+	VBLENDVPS  Y8, Y9, Y10, Y9
+	VMASKMOVPS (BX)(R9*1), Y7, Y8
+	VSUBPS     Y8, Y9, Y9
+	VMULPS     Y0, Y9, Y9
+	VMASKMOVPS (AX)(R9*1), Y7, Y10
+	VADDPS     Y9, Y10, Y9
+	VMULPS     Y9, Y9, Y10
+	VMASKMOVPS (SI)(R9*1), Y7, Y11
+	VSUBPS     Y8, Y11, Y11
+	VMULPS     Y0, Y11, Y11
+	VMASKMOVPS (CX)(R9*1), Y7, Y0
+	VADDPS     Y11, Y0, Y11
+	VMULPS     Y11, Y11, Y0
+	VADDPS     Y0, Y10, Y10
+	VMASKMOVPS (DI)(R9*1), Y7, Y0
+	VSUBPS     Y8, Y0, Y0
+	VMULPS     Y1, Y0, Y0
+	VMASKMOVPS (DX)(R9*1), Y7, Y1
+	VADDPS     Y0, Y1, Y0
+	VMULPS     Y0, Y0, Y1
+	VADDPS     Y1, Y10, Y10
+	VCMPPS     $0x1e, Y3, Y10, Y1
+	VMOVMSKPS  Y1, BX
+	TESTL      BX, BX
+	JZ         inside_rest
+	VSQRTPS    Y10, Y3
+	VDIVPS     Y3, Y2, Y3
+	VMULPS     Y3, Y9, Y2
+	VBLENDVPS  Y1, Y2, Y9, Y9
+	VMULPS     Y3, Y11, Y2
+	VBLENDVPS  Y1, Y2, Y11, Y11
+	VMULPS     Y3, Y0, Y2
+	VBLENDVPS  Y1, Y2, Y0, Y0
+
+inside_rest:
+	VMASKMOVPS (AX)(R9*1), Y7, Y1
+	VSUBPS     Y1, Y9, Y9
+	VMULPS     Y4, Y9, Y9
+	VADDPS     Y9, Y1, Y1
+	VANDPS     Y1, Y6, Y2
+	VCMPPS     $0x15, Y5, Y2, Y2
+	VANDPS     Y1, Y2, Y1
+	VMASKMOVPS Y1, Y7, (AX)(R9*1)
+	VMASKMOVPS (CX)(R9*1), Y7, Y1
+	VSUBPS     Y1, Y11, Y11
+	VMULPS     Y4, Y11, Y11
+	VADDPS     Y11, Y1, Y1
+	VANDPS     Y1, Y6, Y2
+	VCMPPS     $0x15, Y5, Y2, Y2
+	VANDPS     Y1, Y2, Y1
+	VMASKMOVPS Y1, Y7, (CX)(R9*1)
+	VMASKMOVPS (DX)(R9*1), Y7, Y1
+	VSUBPS     Y1, Y0, Y0
+	VMULPS     Y4, Y0, Y0
+	VADDPS     Y0, Y1, Y1
+	VANDPS     Y1, Y6, Y0
+	VCMPPS     $0x15, Y5, Y0, Y0
+	VANDPS     Y1, Y0, Y1
+	VMASKMOVPS Y1, Y7, (DX)(R9*1)
+	VZEROUPPER
+	RET
+
+// func fitRow(dual *float32, now *float32, bar *float32, data *float32, vari *float32, sigma *float32, inv *float32, n int, scale float32, rho float32, tiny float32)
+// Requires: AVX, AVX2
+TEXT ·fitRow(SB), NOSPLIT, $0-76
+	MOVQ         dual+0(FP), AX
+	MOVQ         now+8(FP), CX
+	MOVQ         bar+16(FP), DX
+	MOVQ         data+24(FP), BX
+	MOVQ         vari+32(FP), SI
+	MOVQ         sigma+40(FP), DI
+	MOVQ         inv+48(FP), R8
+	MOVQ         n+56(FP), R9
+	VBROADCASTSS scale+64(FP), Y0
+	VBROADCASTSS rho+68(FP), Y1
+	VBROADCASTSS tiny+72(FP), Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSRLD       $0x01, Y3, Y3
+	VXORPS       Y5, Y5, Y5
+	VPCMPEQD     Y4, Y4, Y4
+	VPSRLD       $0x1a, Y4, Y4
+	VPSLLD       $0x18, Y4, Y4
 	XORQ         R10, R10
 
 whole:
 	CMPQ      R9, $0x08
 	JL        tail
+	VMOVUPS   (DX)(R10*1), Y6
+	VMOVUPS   (CX)(R10*1), Y7
+	VMULPS    Y0, Y6, Y6
+	VADDPS    Y7, Y6, Y8
+	VMULPS    Y4, Y8, Y8
+	VSUBPS    Y7, Y8, Y8
+	VMULPS    Y1, Y8, Y8
+	VADDPS    Y8, Y7, Y8
+	VMOVUPS   Y8, (CX)(R10*1)
 	VMOVUPS   (BX)(R10*1), Y7
-	VMOVUPS   (SI)(R10*1), Y9
-	VSUBPS    Y7, Y9, Y9
-	VMULPS    Y0, Y9, Y9
 	VMOVUPS   (AX)(R10*1), Y8
-	VADDPS    Y9, Y8, Y9
-	VMULPS    Y9, Y9, Y8
-	VMOVUPS   (DI)(R10*1), Y10
-	VSUBPS    Y7, Y10, Y10
-	VMULPS    Y0, Y10, Y10
-	VMOVUPS   (CX)(R10*1), Y11
-	VADDPS    Y10, Y11, Y10
-	VMULPS    Y10, Y10, Y11
-	VADDPS    Y11, Y8, Y8
-	VMOVUPS   (R8)(R10*1), Y11
-	VSUBPS    Y7, Y11, Y11
-	VMULPS    Y1, Y11, Y11
-	VMOVUPS   (DX)(R10*1), Y7
-	VADDPS    Y11, Y7, Y11
-	VMULPS    Y11, Y11, Y7
-	VADDPS    Y7, Y8, Y8
-	VCMPPS    $0x1e, Y3, Y8, Y7
-	VSQRTPS   Y8, Y8
-	VDIVPS    Y8, Y2, Y8
-	VMULPS    Y8, Y9, Y12
-	VBLENDVPS Y7, Y12, Y9, Y9
-	VMOVUPS   (AX)(R10*1), Y12
-	VSUBPS    Y12, Y9, Y9
-	VMULPS    Y4, Y9, Y9
-	VADDPS    Y9, Y12, Y12
-	VANDPS    Y12, Y6, Y9
-	VCMPPS    $0x15, Y5, Y9, Y9
-	VANDPS    Y12, Y9, Y12
-	VMOVUPS   Y12, (AX)(R10*1)
-	VMULPS    Y8, Y10, Y9
-	VBLENDVPS Y7, Y9, Y10, Y10
-	VMOVUPS   (CX)(R10*1), Y9
-	VSUBPS    Y9, Y10, Y10
-	VMULPS    Y4, Y10, Y10
-	VADDPS    Y10, Y9, Y9
-	VANDPS    Y9, Y6, Y10
-	VCMPPS    $0x15, Y5, Y10, Y10
-	VANDPS    Y9, Y10, Y9
-	VMOVUPS   Y9, (CX)(R10*1)
-	VMULPS    Y8, Y11, Y8
-	VBLENDVPS Y7, Y8, Y11, Y11
-	VMOVUPS   (DX)(R10*1), Y7
-	VSUBPS    Y7, Y11, Y11
-	VMULPS    Y4, Y11, Y11
-	VADDPS    Y11, Y7, Y7
-	VANDPS    Y7, Y6, Y8
-	VCMPPS    $0x15, Y5, Y8, Y8
-	VANDPS    Y7, Y8, Y7
-	VMOVUPS   Y7, (DX)(R10*1)
+	VMOVUPS   (DI)(R10*1), Y9
+	VMOVUPS   (SI)(R10*1), Y10
+	VSUBPS    Y7, Y6, Y7
+	VMULPS    Y7, Y9, Y7
+	VADDPS    Y7, Y8, Y7
+	VMOVUPS   (R8)(R10*1), Y6
+	VMULPS    Y6, Y7, Y7
+	VSUBPS    Y8, Y7, Y7
+	VMULPS    Y1, Y7, Y7
+	VADDPS    Y7, Y8, Y7
+	VANDPS    Y7, Y3, Y6
+	VCMPPS    $0x15, Y2, Y6, Y6
+	VANDPS    Y7, Y6, Y7
+	VCMPPS    $0x1e, Y5, Y10, Y10
+	VBLENDVPS Y10, Y7, Y8, Y8
+	VMOVUPS   Y8, (AX)(R10*1)
 	ADDQ      $0x20, R10
 	SUBQ      $0x08, R9
 	JMP       whole
@@ -801,61 +1000,34 @@ tail:
 	MOVQ       $0x00000008, R11
 	SUBQ       R9, R11
 	LEAQ       masks<>+0(SB), R9
-	VMOVUPS    (R9)(R11*4), Y7
-	VMASKMOVPS (BX)(R10*1), Y7, Y8
-	VMASKMOVPS (SI)(R10*1), Y7, Y10
-	VSUBPS     Y8, Y10, Y10
-	VMULPS     Y0, Y10, Y10
-	VMASKMOVPS (AX)(R10*1), Y7, Y9
-	VADDPS     Y10, Y9, Y10
-	VMULPS     Y10, Y10, Y9
-	VMASKMOVPS (DI)(R10*1), Y7, Y11
-	VSUBPS     Y8, Y11, Y11
-	VMULPS     Y0, Y11, Y11
-	VMASKMOVPS (CX)(R10*1), Y7, Y0
-	VADDPS     Y11, Y0, Y11
-	VMULPS     Y11, Y11, Y0
-	VADDPS     Y0, Y9, Y9
-	VMASKMOVPS (R8)(R10*1), Y7, Y0
+	VMOVUPS    (R9)(R11*4), Y6
+	VMASKMOVPS (DX)(R10*1), Y6, Y7
+	VMASKMOVPS (CX)(R10*1), Y6, Y8
+	VMULPS     Y0, Y7, Y7
+	VADDPS     Y8, Y7, Y0
+	VMULPS     Y4, Y0, Y0
 	VSUBPS     Y8, Y0, Y0
 	VMULPS     Y1, Y0, Y0
-	VMASKMOVPS (DX)(R10*1), Y7, Y1
-	VADDPS     Y0, Y1, Y0
-	VMULPS     Y0, Y0, Y1
-	VADDPS     Y1, Y9, Y9
-	VCMPPS     $0x1e, Y3, Y9, Y1
-	VSQRTPS    Y9, Y3
-	VDIVPS     Y3, Y2, Y3
-	VMULPS     Y3, Y10, Y2
-	VBLENDVPS  Y1, Y2, Y10, Y10
-	VMASKMOVPS (AX)(R10*1), Y7, Y2
-	VSUBPS     Y2, Y10, Y10
-	VMULPS     Y4, Y10, Y10
-	VADDPS     Y10, Y2, Y2
-	VANDPS     Y2, Y6, Y8
-	VCMPPS     $0x15, Y5, Y8, Y8
-	VANDPS     Y2, Y8, Y2
-	VMASKMOVPS Y2, Y7, (AX)(R10*1)
-	VMULPS     Y3, Y11, Y2
-	VBLENDVPS  Y1, Y2, Y11, Y11
-	VMASKMOVPS (CX)(R10*1), Y7, Y2
-	VSUBPS     Y2, Y11, Y11
-	VMULPS     Y4, Y11, Y11
-	VADDPS     Y11, Y2, Y2
-	VANDPS     Y2, Y6, Y8
-	VCMPPS     $0x15, Y5, Y8, Y8
-	VANDPS     Y2, Y8, Y2
-	VMASKMOVPS Y2, Y7, (CX)(R10*1)
-	VMULPS     Y3, Y0, Y2
-	VBLENDVPS  Y1, Y2, Y0, Y0
-	VMASKMOVPS (DX)(R10*1), Y7, Y1
-	VSUBPS     Y1, Y0, Y0
-	VMULPS     Y4, Y0, Y0
-	VADDPS     Y0, Y1, Y1
-	VANDPS     Y1, Y6, Y0
-	VCMPPS     $0x15, Y5, Y0, Y0
-	VANDPS     Y1, Y0, Y1
-	VMASKMOVPS Y1, Y7, (DX)(R10*1)
+	VADDPS     Y0, Y8, Y0
+	VMASKMOVPS Y0, Y6, (CX)(R10*1)
+	VMASKMOVPS (BX)(R10*1), Y6, Y0
+	VMASKMOVPS (AX)(R10*1), Y6, Y4
+	VMASKMOVPS (DI)(R10*1), Y6, Y8
+	VMASKMOVPS (SI)(R10*1), Y6, Y9
+	VSUBPS     Y0, Y7, Y0
+	VMULPS     Y0, Y8, Y0
+	VADDPS     Y0, Y4, Y0
+	VMASKMOVPS (R8)(R10*1), Y6, Y7
+	VMULPS     Y7, Y0, Y0
+	VSUBPS     Y4, Y0, Y0
+	VMULPS     Y1, Y0, Y0
+	VADDPS     Y0, Y4, Y0
+	VANDPS     Y0, Y3, Y1
+	VCMPPS     $0x15, Y2, Y1, Y1
+	VANDPS     Y0, Y1, Y0
+	VCMPPS     $0x1e, Y5, Y9, Y9
+	VBLENDVPS  Y9, Y0, Y4, Y4
+	VMASKMOVPS Y4, Y6, (AX)(R10*1)
 
 done:
 	VZEROUPPER

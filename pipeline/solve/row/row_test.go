@@ -195,6 +195,7 @@ func TestStepsSameBits(t *testing.T) {
 			if n > 0 {
 				l.Dual(c[1], c[2], c[3], c[0], c[6], c[7], Ball{Sigma: .3, Alpha: .15, Lambda: .7}, testStep)
 			}
+			l.Fit(Data{Dual: c[0], Now: c[1], Bar: c[2], Data: c[3], Vari: c[4], Sigma: c[5], Inv: c[6]}, 1.3, testStep)
 		}
 		run(l, got)
 		run(plain, want)
@@ -272,6 +273,64 @@ func TestSplineIsTransposed(t *testing.T) {
 					t.Errorf("%s n=%d row %d: %g and %g differ by %g", l, n, r, a, b, d)
 				}
 			}
+		}
+	}
+}
+
+// testSparse makes a matrix as an image turned, stretched and cut at its edges
+// would, or any.
+func testSparse(m maker, rows, cols int, any bool) *Sparse {
+	start, col := []int32{0}, []int32(nil)
+	for r := range rows {
+		for t := range m.IntN(7) {
+			c := r*cols/rows + t + r%13/9*20
+			if any {
+				c = m.IntN(cols)
+			}
+			if c < cols {
+				col = append(col, int32(c))
+			}
+		}
+		start = append(start, int32(len(col)))
+	}
+	return NewSparse(start, col, m.row(len(col), false), cols)
+}
+
+func TestSparseSameBits(t *testing.T) {
+	l := wide(t)
+	lengths(func(m maker, n int, any bool, name string) {
+		if n == 0 {
+			return
+		}
+		cols := 1 + m.IntN(2*n)
+		s := testSparse(m, n, cols, any)
+		src := m.row(cols, false)
+		lo := m.IntN(n + 1)
+		hi := lo + m.IntN(n-lo+1)
+		got, want := m.row(n, false), make([]float32, n)
+		copy(want, got)
+		l.Mul(s, got, src, lo, hi)
+		plain.Mul(s, want, src, lo, hi)
+		same(t, fmt.Sprintf("Mul %s cols=%d rows %d to %d", name, cols, lo, hi), got, want)
+		l.Mul(s, got, src, 0, n)
+		plain.Mul(s, want, src, 0, n)
+		same(t, "Mul whole "+name, got, want)
+	})
+}
+
+// TestSparseIsTheSum compares the plain loop with a dense matrix.
+func TestSparseIsTheSum(t *testing.T) {
+	m := newMaker(11)
+	s := testSparse(m, 30, 40, true)
+	src, got := m.row(40, false), make([]float32, 30)
+	plain.Mul(s, got, src, 0, 30)
+	for r := range got {
+		var want float32
+		for j := s.start[r]; j < s.start[r+1]; j++ {
+			want += s.val[j] * src[s.col[j]]
+		}
+		if got[r] != want {
+			t.Errorf("row %d: %g, want %g", r, got[r], want)
 		}
 	}
 }

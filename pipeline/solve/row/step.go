@@ -82,11 +82,11 @@ func (l Lanes) Dual(p, q, r, b, down, next []float32, a Ball, s Step) {
 	n := len(b)
 	m := n - 1
 	p, q, r, down, next = p[:n], q[:n], r[:n], down[:n], next[:n]
-	if l.wide && m > 0 {
-		dualRow(&p[0], &q[0], &r[0], &b[0], &b[1], &down[0], &next[0], m, a.Sigma, a.Sigma*a.Alpha, a.Lambda, a.Lambda*a.Lambda, s.Rho, s.Tiny)
-	} else {
-		dualPlain(p[:m], q[:m], r[:m], b[:m], b[1:], down[:m], next[:m], a, s)
+	if l.wide {
+		dualRow(&p[0], &q[0], &r[0], &b[0], &down[0], &next[0], n, a.Sigma, a.Sigma*a.Alpha, a.Lambda, a.Lambda*a.Lambda, s.Rho, s.Tiny)
+		return
 	}
+	dualPlain(p[:m], q[:m], r[:m], b[:m], b[1:], down[:m], next[:m], a, s)
 	dualPlain(p[m:], q[m:], r[m:], b[m:], b[m:], down[m:], next[m:], a, s)
 }
 
@@ -107,5 +107,33 @@ func dualPlain(p, q, r, b, ahead, down, next []float32, a Ball, s Step) {
 		p[i] = s.flush(p0 + float32(s.Rho*(u0-p0)))
 		q[i] = s.flush(q0 + float32(s.Rho*(u1-q0)))
 		r[i] = s.flush(r0 + float32(s.Rho*(u2-r0)))
+	}
+}
+
+// Data is a run of pixels of an arm: data with their variance, where what is
+// not positive masks a pixel; the dual with its step sizes, σ and 1/(1 + σ·vari);
+// the model at the extrapolated cube, bar, and at the relaxed one, now.
+type Data struct{ Dual, Now, Bar, Data, Vari, Sigma, Inv []float32 }
+
+// Fit relaxes the model and steps the dual of the pixels that are not masked:
+//
+//	b = scale·bar;  now += ρ·((b + now)/2 − now)
+//	u = (dual + σ·(b − data))·inv;  dual += ρ·(u − dual)
+func (l Lanes) Fit(d Data, scale float32, s Step) {
+	n := len(d.Dual)
+	dual, now, bar, data, vari, sigma, inv := d.Dual, d.Now[:n], d.Bar[:n], d.Data[:n], d.Vari[:n], d.Sigma[:n], d.Inv[:n]
+	if l.wide && n > 0 {
+		fitRow(&dual[0], &now[0], &bar[0], &data[0], &vari[0], &sigma[0], &inv[0], n, scale, s.Rho, s.Tiny)
+		return
+	}
+	for j, old := range now {
+		b := float32(bar[j] * scale)
+		now[j] = old + float32(s.Rho*((b+old)/2-old))
+		if !(vari[j] > 0) {
+			continue
+		}
+		u := dual[j] + float32(sigma[j]*(b-data[j]))
+		u = float32(u*inv[j]) - dual[j]
+		dual[j] = s.flush(dual[j] + float32(s.Rho*u))
 	}
 }

@@ -37,9 +37,11 @@ func main() {
 	up()
 	down()
 	turn()
+	sparse()
 	project()
 	diverge()
 	dual()
+	fit()
 	Generate()
 }
 

@@ -1,6 +1,8 @@
 package main
 
 import (
+	"fmt"
+
 	. "github.com/mmcloughlin/avo/build"
 	. "github.com/mmcloughlin/avo/operand"
 )
@@ -61,18 +63,26 @@ func down() {
 	ADDQ(src, p)
 	MOVLQSX(Mem{Base: taps}, k)
 	VXORPS(sum, sum, sum)
-	Label("taps")
-	TESTQ(k, k)
-	JLE(LabelRef("sum"))
-	v := YMM()
-	VBROADCASTSS(Mem{Base: w}, v)
-	VMULPS(Mem{Base: p}, v, v)
-	VADDPS(v, sum, sum)
-	ADDQ(Imm(4), w)
-	ADDQ(Imm(4*lanes), p)
-	DECQ(k)
-	JMP(LabelRef("taps"))
-	Label("sum")
+	tap := func(i int) {
+		v := YMM()
+		VBROADCASTSS(Mem{Base: w, Disp: 4 * i}, v)
+		VMULPS(Mem{Base: p, Disp: 4 * lanes * i}, v, v)
+		VADDPS(v, sum, sum)
+	}
+	for _, taps := range []int{4, 1} {
+		here, next := fmt.Sprintf("taps%d", taps), fmt.Sprintf("past%d", taps)
+		Label(here)
+		CMPQ(k, Imm(uint64(taps)))
+		JL(LabelRef(next))
+		for i := range taps {
+			tap(i)
+		}
+		ADDQ(Imm(uint64(4*taps)), w)
+		ADDQ(U32(4*lanes*taps), p)
+		SUBQ(Imm(uint64(taps)), k)
+		JMP(LabelRef(here))
+		Label(next)
+	}
 	VMOVUPS(sum, Mem{Base: dst})
 	ADDQ(Imm(4*lanes), dst)
 	ADDQ(Imm(4), first)

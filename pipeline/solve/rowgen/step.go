@@ -2,6 +2,7 @@ package main
 
 import (
 	. "github.com/mmcloughlin/avo/build"
+	. "github.com/mmcloughlin/avo/operand"
 	"github.com/mmcloughlin/avo/reg"
 )
 
@@ -57,49 +58,130 @@ func diverge() {
 	})
 }
 
+// dual reads the right-hand neighbours one element further on. The last
+// register's worth, 1 to 8 elements, goes under a mask: one less is read, and
+// the last element is its own neighbour.
 func dual() {
-	TEXT("dualRow", NOSPLIT, "func(p, q, r, b, ahead, down, next *float32, n int, sigma, sigmaT, lambda, limit, rho, tiny float32)")
+	TEXT("dualRow", NOSPLIT, "func(p, q, r, b, down, next *float32, n int, sigma, sigmaT, lambda, limit, rho, tiny float32)")
 	Pragma("noescape")
-	Doc("dualRow is Dual for n coefficients with right-hand neighbours ahead.")
-	u0 := [3]reg.GPVirtual{pointer("p"), pointer("q"), pointer("r")}
-	b := pointer("b")
-	to := [3]reg.GPVirtual{pointer("ahead"), pointer("down"), pointer("next")}
+	Doc("dualRow is Dual for n coefficients, n > 0.")
+	k := &dualLoop{old: [3]reg.GPVirtual{pointer("p"), pointer("q"), pointer("r")}, b: pointer("b")}
+	k.to = [3]reg.GPVirtual{nil, pointer("down"), pointer("next")}
 	n := pointer("n")
-	step := [3]reg.VecVirtual{every("sigma"), nil, every("sigmaT")}
-	step[1] = step[0]
-	lambda, limit := every("lambda"), every("limit")
-	rho, tiny, magnitude := every("rho"), every("tiny"), magnitudes()
+	k.step = [3]reg.VecVirtual{every("sigma"), nil, every("sigmaT")}
+	k.step[1] = k.step[0]
+	k.lambda, k.limit = every("lambda"), every("limit")
+	k.rho, k.tiny, k.magnitude = every("rho"), every("tiny"), magnitudes()
+	at := GP64()
+	XORQ(at, at)
+	Label("whole")
+	CMPQ(n, Imm(lanes))
+	JLE(LabelRef("rest"))
+	ahead := YMM()
+	VMOVUPS(Mem{Base: k.b, Index: at, Scale: 1, Disp: 4}, ahead)
+	k.body(access{at: at}, ahead)
+	ADDQ(Imm(4*lanes), at)
+	SUBQ(Imm(lanes), n)
+	JMP(LabelRef("whole"))
+	Label("rest")
+	mask, fewer := tailMask(n), YMM()
+	DECQ(n)
+	ahead = YMM()
+	VMOVAPS(tailMask(n), fewer)
+	a := access{at: at, mask: mask, tail: true}
+	VMASKMOVPS(Mem{Base: k.b, Index: at, Scale: 1, Disp: 4}, fewer, ahead)
+	VBLENDVPS(fewer, ahead, a.read(k.b), ahead)
+	k.body(a, ahead)
+	VZEROUPPER()
+	RET()
+}
+
+type dualLoop struct {
+	old, to                             [3]reg.GPVirtual
+	b                                   reg.GPVirtual
+	step                                [3]reg.VecVirtual
+	lambda, limit, rho, tiny, magnitude reg.VecVirtual
+}
+
+func (k *dualLoop) body(a access, ahead reg.VecVirtual) {
+	var u [3]reg.VecVirtual
+	at, norm := a.read(k.b), YMM()
+	for c := range u {
+		u[c] = ahead
+		if c > 0 {
+			u[c] = a.read(k.to[c])
+		}
+		VSUBPS(at, u[c], u[c])
+		VMULPS(k.step[c], u[c], u[c])
+		old := a.read(k.old[c])
+		VADDPS(u[c], old, u[c])
+		if c == 0 {
+			VMULPS(u[0], u[0], norm)
+			continue
+		}
+		s := YMM()
+		VMULPS(u[c], u[c], s)
+		VADDPS(s, norm, norm)
+	}
+	outside, f, any, inside := YMM(), YMM(), GP32(), "inside"
+	if a.tail {
+		inside = "inside_rest"
+	}
+	VCMPPS(greater, k.limit, norm, outside)
+	VMOVMSKPS(outside, any)
+	TESTL(any, any)
+	JZ(LabelRef(inside)) // the usual case; a root and a quotient take long
+	VSQRTPS(norm, f)
+	VDIVPS(f, k.lambda, f)
+	for c := range u {
+		s := YMM()
+		VMULPS(f, u[c], s)
+		VBLENDVPS(outside, s, u[c], u[c])
+	}
+	Label(inside)
+	for c := range u {
+		old := a.read(k.old[c])
+		VSUBPS(old, u[c], u[c])
+		VMULPS(k.rho, u[c], u[c])
+		VADDPS(u[c], old, old)
+		flush(old, k.tiny, k.magnitude)
+		a.store(old, a.row(k.old[c]))
+	}
+}
+
+func fit() {
+	TEXT("fitRow", NOSPLIT, "func(dual, now, bar, data, vari, sigma, inv *float32, n int, scale, rho, tiny float32)")
+	Pragma("noescape")
+	Doc("fitRow is Fit for n pixels.")
+	dual, now, bar, data := pointer("dual"), pointer("now"), pointer("bar"), pointer("data")
+	vari, sigma, inv := pointer("vari"), pointer("sigma"), pointer("inv")
+	n := pointer("n")
+	scale, rho, tiny, magnitude := every("scale"), every("rho"), every("tiny"), magnitudes()
+	half, none := YMM(), zeros()
+	VPCMPEQD(half, half, half) // 0.5 is 0x3f000000
+	VPSRLD(Imm(26), half, half)
+	VPSLLD(Imm(24), half, half)
 	each(n, func(a access) {
-		var u [3]reg.VecVirtual
-		at, norm := a.read(b), YMM()
-		for c := range u {
-			u[c] = a.read(to[c])
-			VSUBPS(at, u[c], u[c])
-			VMULPS(step[c], u[c], u[c])
-			old := a.read(u0[c])
-			VADDPS(u[c], old, u[c])
-			if c == 0 {
-				VMULPS(u[0], u[0], norm)
-				continue
-			}
-			s := YMM()
-			VMULPS(u[c], u[c], s)
-			VADDPS(s, norm, norm)
-		}
-		outside, f := YMM(), YMM()
-		VCMPPS(greater, limit, norm, outside)
-		VSQRTPS(norm, f)
-		VDIVPS(f, lambda, f)
-		for c := range u {
-			s := YMM()
-			VMULPS(f, u[c], s)
-			VBLENDVPS(outside, s, u[c], u[c])
-			old := a.read(u0[c])
-			VSUBPS(old, u[c], u[c])
-			VMULPS(rho, u[c], u[c])
-			VADDPS(u[c], old, old)
-			flush(old, tiny, magnitude)
-			a.store(old, a.row(u0[c]))
-		}
+		b, old, at := a.read(bar), a.read(now), YMM()
+		VMULPS(scale, b, b)
+		VADDPS(old, b, at)
+		VMULPS(half, at, at)
+		VSUBPS(old, at, at)
+		VMULPS(rho, at, at)
+		VADDPS(at, old, at)
+		a.store(at, a.row(now))
+		u, d, s, used := a.read(data), a.read(dual), a.read(sigma), a.read(vari)
+		VSUBPS(u, b, u)
+		VMULPS(u, s, u)
+		VADDPS(u, d, u)
+		s = a.read(inv)
+		VMULPS(s, u, u)
+		VSUBPS(d, u, u)
+		VMULPS(rho, u, u)
+		VADDPS(u, d, u)
+		flush(u, tiny, magnitude)
+		VCMPPS(greater, none, used, used)
+		VBLENDVPS(used, u, d, d)
+		a.store(d, a.row(dual))
 	})
 }
