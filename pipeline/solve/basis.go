@@ -1,6 +1,10 @@
 package solve
 
-import "math"
+import (
+	"math"
+
+	"unsheard/pipeline/solve/row"
+)
 
 // basis is one axis of B: n samples at 0, 1, … n−1 as sums of m cubic B-splines
 // on knots h apart, centred on the samples. At least the sample range is
@@ -9,12 +13,13 @@ import "math"
 type basis struct {
 	n, m  int
 	h     float64
-	off   float64   // centre of spline 0, in samples
-	taps  int       // splines per sample: 4, or 1
-	first []int     // first spline of a sample
-	w     []float32 // taps weights per sample
-	lo    []int     // first sample of a spline
-	wt    [][]float32
+	off   float64     // centre of spline 0, in samples
+	taps  int         // splines per sample: 4, or 1
+	first []int       // first spline of a sample
+	w     []float32   // taps weights per sample
+	lo    []int       // first sample of a spline
+	wt    [][]float32 // weights of a spline's samples
+	line  *row.Spline // the same for the loops along rows
 }
 
 // cubic is the centred cardinal cubic B-spline (de Boor, A Practical Guide to
@@ -31,7 +36,9 @@ func cubic(u float64) float64 {
 
 func newBasis(n int, h float64) basis {
 	if n == 1 {
-		return basis{n: 1, m: 1, h: h, taps: 1, first: []int{0}, w: []float32{1}, lo: []int{0}, wt: [][]float32{{1}}}
+		b := basis{n: 1, m: 1, h: h, taps: 1, first: []int{0}, w: []float32{1}, lo: []int{0}, wt: [][]float32{{1}}}
+		b.line = row.NewSpline(b.taps, b.first, b.w, b.lo, b.wt)
+		return b
 	}
 	b := basis{n: n, m: int(math.Ceil(float64(n-1)/h)) + 3, h: h, taps: 4}
 	b.off = (float64(n-1) - float64(b.m-1)*h) / 2
@@ -53,6 +60,7 @@ func newBasis(n int, h float64) basis {
 			b.wt[f+a] = append(b.wt[f+a], w)
 		}
 	}
+	b.line = row.NewSpline(b.taps, b.first, b.w, b.lo, b.wt)
 	return b
 }
 
@@ -64,48 +72,24 @@ func (b *basis) sum(j int) (s float32) {
 	return s
 }
 
-// up writes B·src along a row: dst has n samples, src m coefficients.
-func (b *basis) up(dst, src []float32) {
-	if b.taps == 1 {
-		dst[0] = src[0]
-		return
-	}
-	w := b.w
-	for i, f := range b.first {
-		s, v := src[f:f+4:f+4], w[4*i:4*i+4:4*i+4]
-		dst[i] = float32(v[0]*s[0]) + float32(v[1]*s[1]) + float32(v[2]*s[2]) + float32(v[3]*s[3])
-	}
-}
-
-// down writes Bᵀ·src along a row: dst has m coefficients, src n samples.
-func (b *basis) down(dst, src []float32) {
-	for j, w := range b.wt {
-		var s float32
-		in := src[b.lo[j]:][:len(w)]
-		for i, v := range w {
-			s += float32(v * in[i])
+// upRows writes B·src, where B works down the columns: dst has n rows of w, src
+// m. Each row is multiplied by that of by unless it is nil.
+func (b *basis) upRows(l row.Lanes, dst, src []float32, w int, by []float32) {
+	for y, f := range b.first {
+		out, wt := dst[y*w:(y+1)*w], b.w[y*b.taps:(y+1)*b.taps]
+		if by == nil {
+			l.FirSet(out, wt, src, f*w, w)
+		} else {
+			l.FirMul(out, wt, src, f*w, w, by[y*w:(y+1)*w])
 		}
-		dst[j] = s
 	}
 }
 
-// upRow writes row y of B·src, where B works down the columns of src, m rows of
-// w.
-func (b *basis) upRow(dst, src []float32, y, w int) {
-	f := b.first[y]
-	if b.taps == 1 {
-		copy(dst[:w], src[:w])
-		return
-	}
-	v, s := b.w[4*y:4*y+4], src[f*w:(f+4)*w]
-	set4(dst[:w], v[0], v[1], v[2], v[3], s[:w], s[w:2*w], s[2*w:3*w], s[3*w:])
-}
-
-// downRows adds Bᵀ·src to dst, where B works down the columns: dst has m rows of
-// w, src n.
-func (b *basis) downRows(dst, src []float32, w int) {
+// downRows writes Bᵀ·src, where B works down the columns: dst has m rows of w,
+// src n.
+func (b *basis) downRows(l row.Lanes, dst, src []float32, w int) {
 	for j, wt := range b.wt {
-		fir(dst[j*w:(j+1)*w], wt, src, b.lo[j]*w, w)
+		l.FirSet(dst[j*w:(j+1)*w], wt, src, b.lo[j]*w, w)
 	}
 }
 

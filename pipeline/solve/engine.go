@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"unsheard/pipeline/optics"
+	"unsheard/pipeline/solve/row"
 )
 
 // core holds the two arms' data and duals, and what both loops, over voxels
@@ -20,8 +21,9 @@ type core struct {
 	sum           []float32 // Σ_k of the extrapolated cube, on the window
 	zero          []float32
 	workers       int
-	light         float64 // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
-	bench         bench   // of the sieves
+	light         float64   // Σx²/Σx, the typical light of a lit voxel, 0 while unknown
+	workspace     workspace // of the sieves
+	lanes         row.Lanes
 }
 
 // engine is the primal-dual loop over voxels. Its bands are worked in
@@ -89,7 +91,7 @@ func newCore(m *optics.Model, workers int) *core {
 	g := m.Geometry()
 	rows, cols := m.StreakShape()
 	rr, rc := m.ReferenceShape()
-	e := &core{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers}
+	e := &core{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers, lanes: row.Best()}
 	e.view = g.View
 	e.own, e.col = make([]float32, e.h*e.w), make([]float32, rows*cols)
 	e.castS = make([]float32, rows*cols)

@@ -1,6 +1,13 @@
 package solve
 
-import "math"
+import (
+	"math"
+
+	"unsheard/pipeline/solve/row"
+)
+
+// step is the relaxed step of the rows' loops.
+var step = row.Step{Rho: relax, Tiny: tiny}
 
 // sieve is the primal-dual loop over spline coefficients z, x = B·z with
 // B = Bt⊗By⊗Bx. The cube itself is never stored: with the fine plane of a
@@ -29,7 +36,7 @@ type sieve struct {
 	spacing    [3]float64
 	bt, by, bx basis
 	z          []float32 // mt·my·mx
-	*bench
+	*workspace
 	volume float64 // voxels per coefficient
 	alpha  float32
 	sigma  float32
@@ -37,14 +44,15 @@ type sieve struct {
 	stats  [][3]float64
 }
 
-// bench is what a sieve works on and need not keep. One serves all sieves of a
+// workspace is what a sieve works on and need not keep. One serves all sieves of a
 // core; it is the sieve's that was begun last.
-type bench struct {
+type workspace struct {
 	bar, tau   []float32 // mt·my·mx
 	px, py, pt []float32 // duals of the differences, likewise
 	lit        []float32 // C∘P_j, mt·H·W
 	work       []float32 // per j: my rows of W
-	grad       []float32 // per j: a row of mx
+	grad       []float32 // the streak's gradient, mt·my·mx
+	turn       []float32 // per j: scratch of row.Lanes.Down
 	total      []float32 // Σ_j of the extrapolated coefficients, my·mx
 	back       []float32 // the reference's gradient, likewise
 	fine       []float32 // my rows of W for the reference
@@ -52,13 +60,13 @@ type bench struct {
 }
 
 // fit gives every slice its length for s.
-func (b *bench) fit(s *sieve) {
+func (b *workspace) fit(s *sieve) {
 	n := s.by.m * s.bx.m
 	for _, v := range []struct {
 		p *[]float32
 		n int
 	}{{&b.bar, s.bt.m * n}, {&b.tau, s.bt.m * n}, {&b.px, s.bt.m * n}, {&b.py, s.bt.m * n}, {&b.pt, s.bt.m * n},
-		{&b.lit, s.bt.m * s.h * s.w}, {&b.work, s.bt.m * s.by.m * s.w}, {&b.grad, s.bt.m * s.bx.m},
+		{&b.lit, s.bt.m * s.h * s.w}, {&b.work, s.bt.m * s.by.m * s.w}, {&b.grad, s.bt.m * n}, {&b.turn, s.bt.m * s.bx.line.DownWork()},
 		{&b.total, n}, {&b.back, n}, {&b.fine, s.by.m * s.w}, {&b.none, s.bx.m}} {
 		if cap(*v.p) < v.n {
 			*v.p = make([]float32, v.n)
@@ -72,7 +80,7 @@ func (b *bench) fit(s *sieve) {
 }
 
 func (c *core) sieve(spacing [3]float64) *sieve {
-	s := &sieve{core: c, bench: &c.bench, spacing: spacing, bt: newBasis(c.t, spacing[0]), by: newBasis(c.h, spacing[1]), bx: newBasis(c.w, spacing[2])}
+	s := &sieve{core: c, workspace: &c.workspace, spacing: spacing, bt: newBasis(c.t, spacing[0]), by: newBasis(c.h, spacing[1]), bx: newBasis(c.w, spacing[2])}
 	s.z = make([]float32, s.bt.m*s.by.m*s.bx.m)
 	s.volume = 1
 	for _, h := range spacing {
@@ -84,16 +92,13 @@ func (c *core) sieve(spacing [3]float64) *sieve {
 
 // plane is phase 1 for coarse time j.
 func (s *sieve) plane(j int, count bool) {
-	my, mx, w := s.by.m, s.bx.m, s.w
-	rows := s.castBack(j, s.castS)
-	g := s.grad[j*mx : (j+1)*mx]
-	share, code := s.bt.sum(j), s.m.Geometry().Code
+	my, mx := s.by.m, s.bx.m
 	n := my * mx
+	g := s.castBack(j, s.castS)
+	s.lanes.Add(g, s.bt.sum(j), s.back)
 	s.stats[j] = [3]float64{}
 	for r := range my {
 		lo := j*n + r*mx
-		s.bx.down(g, rows[r*w:(r+1)*w])
-		add1(g, share, s.back[r*mx:(r+1)*mx])
 		if s.lambda > 0 {
 			up, before := s.none, s.none
 			if r > 0 {
@@ -102,10 +107,10 @@ func (s *sieve) plane(j int, count bool) {
 			if j > 0 {
 				before = s.pt[lo-n : lo-n+mx]
 			}
-			diverge(g, s.px[lo:lo+mx], s.py[lo:lo+mx], up, s.pt[lo:lo+mx], before, s.alpha)
+			s.lanes.Diverge(g[r*mx:(r+1)*mx], s.px[lo:lo+mx], s.py[lo:lo+mx], up, s.pt[lo:lo+mx], before, s.alpha)
 		}
 		z, bar := s.z[lo:lo+mx], s.bar[lo:lo+mx]
-		project(z, bar, g, s.tau[lo:lo+mx])
+		s.lanes.Project(z, bar, g[r*mx:(r+1)*mx], s.tau[lo:lo+mx], step)
 		if count {
 			d, t, t2 := change(bar, z)
 			s.stats[j][0] += d
@@ -113,39 +118,33 @@ func (s *sieve) plane(j int, count bool) {
 			s.stats[j][2] += t2
 		}
 	}
-	s.spreadOut(j, s.bar)
-	for y := range s.h {
-		at := (j*s.h + y) * w
-		mul(s.lit[at:at+w], code[y*w:(y+1)*w])
-	}
+	s.spreadOut(j, s.bar, s.m.Geometry().Code)
 }
 
-// castBack returns Byᵀ·(C∘Σ_k Bt[k][j]·cast[· + k·step]), my rows of W. It uses
-// plane j of lit.
+// castBack returns Byᵀ·(C∘Σ_k Bt[k][j]·cast[· + k·step])·Bx, my rows of mx. It
+// uses plane j of lit.
 func (s *sieve) castBack(j int, cast []float32) []float32 {
-	w, stride := s.w, s.step*s.cols
+	w, stride, n := s.w, s.step*s.cols, s.by.m*s.bx.m
 	rows, q := s.work[j*s.by.m*w:][:s.by.m*w], s.lit[j*s.h*w:][:s.h*w]
 	code := s.m.Geometry().Code
-	clear(q)
-	clear(rows)
 	for y := range s.h {
-		fir(q[y*w:(y+1)*w], s.bt.wt[j], cast, (y+s.pad+s.bt.lo[j]*s.step)*s.cols+s.pad, stride)
-		mul(q[y*w:(y+1)*w], code[y*w:(y+1)*w])
+		s.lanes.FirMul(q[y*w:(y+1)*w], s.bt.wt[j], cast, (y+s.pad+s.bt.lo[j]*s.step)*s.cols+s.pad, stride, code[y*w:(y+1)*w])
 	}
-	s.by.downRows(rows, q, w)
-	return rows
+	s.by.downRows(s.lanes, rows, q, w)
+	g, size := s.grad[j*n:(j+1)*n], s.bx.line.DownWork()
+	s.lanes.Down(s.bx.line, g, rows, s.turn[j*size:(j+1)*size], s.by.m)
+	return g
 }
 
-// spreadOut writes P_j of coefficients v to the plane j of lit.
-func (s *sieve) spreadOut(j int, v []float32) {
+// spreadOut writes P_j of coefficients v to the plane j of lit, times code
+// unless that is nil.
+func (s *sieve) spreadOut(j int, v, code []float32) {
 	my, mx, w := s.by.m, s.bx.m, s.w
 	work := s.work[j*my*w:][:my*w]
 	for r := range my {
-		s.bx.up(work[r*w:(r+1)*w], v[(j*my+r)*mx:][:mx])
+		s.lanes.Up(s.bx.line, work[r*w:(r+1)*w], v[(j*my+r)*mx:][:mx])
 	}
-	for y := range s.h {
-		s.by.upRow(s.lit[(j*s.h+y)*w:][:w], work, y, w)
-	}
+	s.by.upRows(s.lanes, s.lit[j*s.h*w:][:s.h*w], work, w, code)
 }
 
 // gather writes E of the planes of lit to rows of the streak plane and blurs
@@ -168,7 +167,7 @@ func (s *sieve) gather(chunk int) {
 			a0 := max(k0, s.bt.lo[j])
 			a1 := min(k1, s.bt.lo[j]+len(wt)-1)
 			if a0 <= a1 {
-				fir(dst, wt[a0-s.bt.lo[j]:a1-s.bt.lo[j]+1], s.lit, (j*s.h+m-a0*s.step)*s.w, -s.step*s.w)
+				s.lanes.Fir(dst, wt[a0-s.bt.lo[j]:a1-s.bt.lo[j]+1], s.lit, (j*s.h+m-a0*s.step)*s.w, -s.step*s.w)
 			}
 		}
 	}
@@ -180,30 +179,25 @@ func (s *sieve) collapse(v []float32) {
 	my, mx, w := s.by.m, s.bx.m, s.w
 	clear(s.total)
 	for j := range s.bt.m {
-		add1(s.total, s.bt.sum(j), v[j*my*mx:(j+1)*my*mx])
+		s.lanes.Add(s.total, s.bt.sum(j), v[j*my*mx:(j+1)*my*mx])
 	}
 	for r := range my {
-		s.bx.up(s.fine[r*w:(r+1)*w], s.total[r*mx:(r+1)*mx])
+		s.lanes.Up(s.bx.line, s.fine[r*w:(r+1)*w], s.total[r*mx:(r+1)*mx])
 	}
-	for y := range s.h {
-		s.by.upRow(s.sum[y*w:(y+1)*w], s.fine, y, w)
-	}
+	s.by.upRows(s.lanes, s.sum, s.fine, w, nil)
 }
 
 // condense writes Byᵀ·src·Bx of a window plane to back.
 func (s *sieve) condense(src []float32) {
-	w, mx := s.w, s.bx.m
-	clear(s.fine)
-	s.by.downRows(s.fine, src, w)
-	for r := range s.by.m {
-		s.bx.down(s.back[r*mx:(r+1)*mx], s.fine[r*w:(r+1)*w])
-	}
+	s.by.downRows(s.lanes, s.fine, src, s.w)
+	s.lanes.Down(s.bx.line, s.back, s.fine, s.turn, s.by.m)
 }
 
 // inward is the dual step of the differences of coarse time j.
 func (s *sieve) inward(j int) {
 	my, mx := s.by.m, s.bx.m
 	n := my * mx
+	ball := row.Ball{Sigma: s.sigma, Alpha: s.alpha, Lambda: s.lambda}
 	for r := range my {
 		lo := j*n + r*mx
 		b := s.bar[lo : lo+mx]
@@ -214,7 +208,7 @@ func (s *sieve) inward(j int) {
 		if j+1 < s.bt.m {
 			next = s.bar[lo+n : lo+n+mx]
 		}
-		dual(s.px[lo:lo+mx], s.py[lo:lo+mx], s.pt[lo:lo+mx], b, down, next, s.alpha, s.sigma, s.lambda)
+		s.lanes.Dual(s.px[lo:lo+mx], s.py[lo:lo+mx], s.pt[lo:lo+mx], b, down, next, ball, step)
 	}
 }
 
@@ -267,23 +261,19 @@ func (s *sieve) iterate(count bool) (dx, total, square float64) {
 func (s *sieve) steps(gamma, typical, lambda, alpha float64) {
 	s.dataSteps(gamma, typical)
 	s.condense(s.own)
-	my, mx, w := s.by.m, s.bx.m, s.w
+	n := s.by.m * s.bx.m
 	tv := float32(0)
 	if lambda > 0 {
 		tv = float32(s.volume * (4 + 2*alpha) * stepMargin / gamma)
 	}
 	s.each(s.bt.m, func(j int) {
-		rows := s.castBack(j, s.col)
-		share := s.bt.sum(j)
-		for r := range my {
-			tau := s.tau[(j*my+r)*mx:][:mx]
-			s.bx.down(tau, rows[r*w:(r+1)*w])
-			add1(tau, share, s.back[r*mx:(r+1)*mx])
-			for i, v := range tau {
-				tau[i] = 0
-				if v+tv > 0 {
-					tau[i] = 1 / (v + tv)
-				}
+		g := s.castBack(j, s.col)
+		s.lanes.Add(g, s.bt.sum(j), s.back)
+		tau := s.tau[j*n : (j+1)*n]
+		for i, v := range g {
+			tau[i] = 0
+			if v+tv > 0 {
+				tau[i] = 1 / (v + tv)
 			}
 		}
 	})
@@ -301,9 +291,9 @@ func (s *sieve) store(x []float32) {
 	}
 	clear(x)
 	for j := range s.bt.m {
-		s.spreadOut(j, s.bar)
+		s.spreadOut(j, s.bar, nil)
 		for k, w := range s.bt.wt[j] {
-			add1(x[(s.bt.lo[j]+k)*n:][:n], w, s.lit[j*n:(j+1)*n])
+			s.lanes.Add(x[(s.bt.lo[j]+k)*n:][:n], w, s.lit[j*n:(j+1)*n])
 		}
 	}
 }
@@ -321,13 +311,7 @@ func (s *sieve) begin(old *sieve) {
 	s.fit(s)
 	copy(s.bar, s.z)
 	code := s.m.Geometry().Code
-	s.each(s.bt.m, func(j int) {
-		s.spreadOut(j, s.bar)
-		for y := range s.h {
-			at := (j*s.h + y) * s.w
-			mul(s.lit[at:at+s.w], code[y*s.w:(y+1)*s.w])
-		}
-	})
+	s.each(s.bt.m, func(j int) { s.spreadOut(j, s.bar, code) })
 	s.collapse(s.bar)
 	a, b := &s.core.s, &s.core.r
 	s.each(len(a.chunks), s.gather)

@@ -6,6 +6,8 @@ import (
 	"math/rand/v2"
 	"slices"
 	"testing"
+
+	"unsheard/pipeline/solve/row"
 )
 
 // The centred cubic B-spline at its knots and halfway between is 2/3, 1/6, 0
@@ -32,7 +34,7 @@ func TestPartitionOfUnity(t *testing.T) {
 				one[j], line[j] = 1, float32(b.off+float64(j)*h)
 			}
 			got := make([]float32, n)
-			b.up(got, one)
+			row.Best().Up(b.line, got, one)
 			for i, v := range got {
 				if math.Abs(float64(v)-1) > 1e-6 {
 					t.Errorf("n %d, h %g: splines add up to %g at %d", n, h, v, i)
@@ -41,7 +43,7 @@ func TestPartitionOfUnity(t *testing.T) {
 			if n == 1 {
 				continue
 			}
-			b.up(got, line)
+			row.Best().Up(b.line, got, line)
 			for i, v := range got {
 				if math.Abs(float64(v)-float64(i)) > 1e-5*float64(n) {
 					t.Errorf("n %d, h %g: line is %g at %d", n, h, v, i)
@@ -139,16 +141,12 @@ func TestSieveIsB(t *testing.T) {
 			}
 			adj := transposed(s, x)
 			s.condense(c.backR)
-			g := make([]float32, s.bx.m)
 			for j := range s.bt.m {
-				rows := s.castBack(j, c.castS)
-				for r := range s.by.m {
-					s.bx.down(g, rows[r*c.w:(r+1)*c.w])
-					add1(g, s.bt.sum(j), s.back[r*s.bx.m:(r+1)*s.bx.m])
-					for i, v := range g {
-						if want := adj[(j*s.by.m+r)*s.bx.m+i]; math.Abs(float64(v)-want) > 1e-4 {
-							t.Fatalf("%v %v: coefficient %d %d %d of the adjoint is %g, want %g", d, h, j, r, i, v, want)
-						}
+				g := s.castBack(j, c.castS)
+				s.lanes.Add(g, s.bt.sum(j), s.back)
+				for i, v := range g {
+					if want := adj[j*len(g)+i]; math.Abs(float64(v)-want) > 1e-4 {
+						t.Fatalf("%v %v: coefficient %d of time %d of the adjoint is %g, want %g", d, h, i, j, v, want)
 					}
 				}
 			}
@@ -258,6 +256,23 @@ func TestSieveWorkersChangeNoBit(t *testing.T) {
 			want = s.z
 		} else if !slices.Equal(s.z, want) {
 			t.Errorf("%d workers give other bits than one", workers)
+		}
+	}
+}
+
+// The vector loops give the bits of the plain ones through a whole solve.
+func TestLanesChangeNoBit(t *testing.T) {
+	var want []float32
+	for _, lanes := range []row.Lanes{{}, row.Best()} {
+		s := preparedSieve(awkward(t, 9, 40, 37, 1), 2, [3]float64{1.5, 2, 2}, .1)
+		s.lanes = lanes
+		for range 40 {
+			s.iterate(true)
+		}
+		if want == nil {
+			want = s.z
+		} else if !slices.Equal(s.z, want) {
+			t.Errorf("%v loops give other bits than plain ones", lanes)
 		}
 	}
 }
