@@ -23,7 +23,9 @@
 // of the window are left out, because a clipped patch has a displaced centroid.
 // The velocity is the slope of a straight line fitted to the centroids by
 // weighted least squares, weights being the light; its deviation comes from
-// the scatter about the line, scaled by √(n/(n−2)) degrees of freedom.
+// the scatter about the line with n−2 degrees of freedom. Where the track bends,
+// as at a wall, the line is that of the stretch of consecutive frames that
+// carries most light and scatters by no more than half a pixel rms.
 //
 // # Deviations
 //

@@ -129,6 +129,24 @@ func TestClippedPatchIsLeftOut(t *testing.T) {
 	}
 }
 
+// TestBounce has a packet thrown back by a wall: the speed is that of the way
+// there, which is longer, and not the mean of both ways.
+func TestBounce(t *testing.T) {
+	const there, back = 2.0, -1.5
+	c := packet(30, 32, 64, 1, 10, 16, there, 0, 2.5, 15, 1e3, 1e6)
+	turn := packet(30, 32, 64, 1, 50-back*20.5, 16, back, 0, 2.5, 15, 1e3, 1e6)
+	n := c.H * c.W
+	copy(c.Data[20*n:], turn.Data[20*n:])
+	r, err := Measure(input(c))
+	if err != nil {
+		t.Fatal(err)
+	}
+	near(t, "velocity_x", value(t, r, "velocity_x"), there, 0.02)
+	if len(r.Notes) == 0 {
+		t.Error("no note that the track bends")
+	}
+}
+
 func TestNoLight(t *testing.T) {
 	c := cube.New(3, 4, 4)
 	for k := range 3 {

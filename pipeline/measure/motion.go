@@ -1,6 +1,7 @@
 package measure
 
 import (
+	"fmt"
 	"math"
 
 	"unsheard/pipeline/cube"
@@ -28,8 +29,12 @@ func (in *Input) motion(r *Report) {
 		r.note("fewer than three frames with an unclipped patch of light: no speed")
 		return
 	}
-	vx, sx := slope(tr.Time, tr.X, tr.Light)
-	vy, sy := slope(tr.Time, tr.Y, tr.Light)
+	a, b := straight(tr)
+	if b-a < len(tr.Time) {
+		r.note(fmt.Sprintf("the track bends or jumps: speed is that of its straight stretch from %.4g to %.4g ps", tr.Time[a], tr.Time[b-1]))
+	}
+	vx, sx := slope(tr.Time[a:b], tr.X[a:b], tr.Light[a:b])
+	vy, sy := slope(tr.Time[a:b], tr.Y[a:b], tr.Light[a:b])
 	v := math.Hypot(vx, vy)
 	s := math.Max(sx, sy)
 	if v > 0 {
@@ -48,6 +53,49 @@ func (in *Input) motion(r *Report) {
 		r.set("speed_scene", m, ms, "m/s", how+", times the scale")
 		r.set("speed_over_c", m/SpeedOfLight, ms/SpeedOfLight, "1", "speed_scene over c = 299 792 458 m/s (SI)")
 	}
+}
+
+const (
+	// bend is how far the centroids may scatter about a straight line, px rms.
+	bend = 0.5
+	// stretch is the least number of centroids of a straight stretch.
+	stretch = 3
+)
+
+// straight returns the stretch a ≤ k < b of consecutive centroids that carries
+// most light among those that scatter about a straight line by no more than
+// bend; where none does, the one that scatters least. A packet that is thrown
+// back by a wall has two of them.
+func straight(tr *Track) (a, b int) {
+	var most float64
+	least := math.Inf(1)
+	found := false
+	for i := range tr.Time {
+		for j := i + stretch; j <= len(tr.Time); j++ {
+			var light float64
+			for _, l := range tr.Light[i:j] {
+				light += l
+			}
+			d := math.Hypot(scatter(tr.Time[i:j], tr.X[i:j], tr.Light[i:j]), scatter(tr.Time[i:j], tr.Y[i:j], tr.Light[i:j]))
+			switch {
+			case d <= bend && (!found || light > most):
+				a, b, most, found = i, j, light, true
+			case !found && d < least:
+				a, b, least = i, j, d
+			}
+		}
+	}
+	return a, b
+}
+
+// scatter is the weighted rms distance of v from its straight line over t.
+func scatter(t, v, g []float64) float64 {
+	_, chi, _ := line(t, v, g)
+	var sum float64
+	for _, w := range g {
+		sum += w
+	}
+	return math.Sqrt(chi / sum)
 }
 
 // track returns the centroids of all frames with enough light, or nil if there
@@ -143,6 +191,13 @@ func box3(dst, v []float32, h, w int) (top float32) {
 // slope fits v = a + b·t with weights g and returns b and its deviation from
 // the scatter, √(χ²/(n−2))·√(1/Σg(t−t̄)²). It needs three points.
 func slope(t, v, g []float64) (b, sigma float64) {
+	b, chi, stt := line(t, v, g)
+	return b, math.Sqrt(chi / float64(len(t)-2) / stt)
+}
+
+// line fits v = a + b·t with weights g and returns b, χ² = Σg(v−a−b·t)² and
+// Σg(t−t̄)².
+func line(t, v, g []float64) (b, chi, stt float64) {
 	var sg, st, sv float64
 	for k := range t {
 		sg += g[k]
@@ -150,16 +205,15 @@ func slope(t, v, g []float64) (b, sigma float64) {
 		sv += g[k] * v[k]
 	}
 	tm, vm := st/sg, sv/sg
-	var stt, stv float64
+	var stv float64
 	for k := range t {
 		stt += g[k] * (t[k] - tm) * (t[k] - tm)
 		stv += g[k] * (t[k] - tm) * (v[k] - vm)
 	}
 	b = stv / stt
-	var chi float64
 	for k := range t {
 		d := v[k] - vm - b*(t[k]-tm)
 		chi += g[k] * d * d
 	}
-	return b, math.Sqrt(chi / float64(len(t)-2) / stt)
+	return b, chi, stt
 }
