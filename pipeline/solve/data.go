@@ -49,15 +49,14 @@ func (e *engine) dataStep() {
 }
 
 // backView is the transposed view of the reference dual.
-func (e *core) backView() {
-	view := &e.view
-	e.each(chunks(e.h), func(j int) {
-		lo, hi := j*chunkRows*e.w, min((j+1)*chunkRows, e.h)*e.w
-		view.AdjointRange(e.backR, e.r.plane, lo, hi)
-		for i := lo; i < hi; i++ {
-			e.backR[i] *= e.r.scale
-		}
-	})
+func (e *core) backView() { e.each(chunks(e.h), e.viewBack) }
+
+func (e *core) viewBack(j int) {
+	lo, hi := j*chunkRows*e.w, min((j+1)*chunkRows, e.h)*e.w
+	e.view.AdjointRange(e.backR, e.r.plane, lo, hi)
+	for i := lo; i < hi; i++ {
+		e.backR[i] *= e.r.scale
+	}
 }
 
 // limits returns the rows of chunk j.

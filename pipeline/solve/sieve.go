@@ -42,6 +42,8 @@ type sieve struct {
 	sigma  float32
 	lambda float32
 	stats  [][3]float64
+	phase  [6]func(int)
+	count  bool // of iterate
 }
 
 // workspace is what a sieve works on and need not keep. One serves all sieves of a
@@ -87,11 +89,12 @@ func (c *core) sieve(spacing [3]float64) *sieve {
 		s.volume *= max(1, h)
 	}
 	s.stats = make([][3]float64, s.bt.m)
+	s.setPhases()
 	return s
 }
 
 // plane is phase 1 for coarse time j.
-func (s *sieve) plane(j int, count bool) {
+func (s *sieve) plane(j int) {
 	my, mx := s.by.m, s.bx.m
 	n := my * mx
 	g := s.castBack(j, s.castS)
@@ -111,7 +114,7 @@ func (s *sieve) plane(j int, count bool) {
 		}
 		z, bar := s.z[lo:lo+mx], s.bar[lo:lo+mx]
 		s.lanes.Project(z, bar, g[r*mx:(r+1)*mx], s.tau[lo:lo+mx], step)
-		if count {
+		if s.count {
 			d, t, t2 := change(bar, z)
 			s.stats[j][0] += d
 			s.stats[j][1] += t
@@ -213,46 +216,62 @@ func (s *sieve) inward(j int) {
 }
 
 func (s *sieve) iterate(count bool) (dx, total, square float64) {
-	ns, nr, planes := len(s.core.s.chunks), len(s.core.r.chunks), s.bt.m
-	s.each(planes, func(j int) { s.plane(j, count) })
+	s.count = count
+	c := s.core
+	ns, nr, planes := len(c.s.chunks), len(c.r.chunks), s.bt.m
+	s.each(planes, s.phase[0])
 	if s.lambda <= 0 {
 		planes = 0
 	}
-	s.each(1+ns+planes, func(j int) {
-		switch {
-		case j == 0:
-			s.collapse(s.bar)
-		case j <= ns:
-			s.gather(j - 1)
-		default:
-			s.inward(j - 1 - ns)
-		}
-	})
-	s.each(nr+ns, func(j int) {
-		if j < nr {
-			s.referenceIn(j)
-		} else {
-			s.core.s.middle(j - nr)
-		}
-	})
-	s.each(nr+ns, func(j int) {
-		if j < nr {
-			s.core.r.middle(j)
-		} else {
-			s.core.s.out(s.castS, j-nr)
-		}
-	})
-	s.each(nr, func(j int) { s.core.r.out(s.core.r.plane, j) })
-	s.backView()
+	s.each(1+ns+planes, s.phase[1])
+	s.each(nr+ns, s.phase[2])
+	s.each(nr+ns, s.phase[3])
+	s.each(nr, s.phase[4])
+	s.each(chunks(s.h), s.phase[5])
 	s.condense(s.backR)
-	s.core.s.total()
-	s.core.r.total()
+	c.s.total()
+	c.r.total()
 	for _, v := range s.stats {
 		dx += v[0]
 		total += v[1]
 		square += v[2]
 	}
 	return dx, total, square
+}
+
+// setPhases makes phases 1 to 6 once, so that the loop does not allocate.
+func (s *sieve) setPhases() {
+	c := s.core
+	ns, nr := len(c.s.chunks), len(c.r.chunks)
+	s.phase = [6]func(int){
+		s.plane,
+		func(j int) {
+			switch {
+			case j == 0:
+				s.collapse(s.bar)
+			case j <= ns:
+				s.gather(j - 1)
+			default:
+				s.inward(j - 1 - ns)
+			}
+		},
+		func(j int) {
+			if j < nr {
+				c.referenceIn(j)
+			} else {
+				c.s.middle(j - nr)
+			}
+		},
+		func(j int) {
+			if j < nr {
+				c.r.middle(j)
+			} else {
+				c.s.out(c.castS, j-nr)
+			}
+		},
+		func(j int) { c.r.out(c.r.plane, j) },
+		c.viewBack,
+	}
 }
 
 // steps sets the step sizes as engine.steps does, for the operator composed
