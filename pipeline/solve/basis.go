@@ -72,24 +72,17 @@ func (b *basis) sum(j int) (s float32) {
 	return s
 }
 
-// upRows writes B·src, where B works down the columns: dst has n rows of w, src
-// m. Each row is multiplied by that of by unless it is nil.
-func (b *basis) upRows(l row.Lanes, dst, src []float32, w int, by []float32) {
-	for y, f := range b.first {
-		out, wt := dst[y*w:(y+1)*w], b.w[y*b.taps:(y+1)*b.taps]
-		if by == nil {
-			l.FirSet(out, wt, src, f*w, w)
-		} else {
-			l.FirMul(out, wt, src, f*w, w, by[y*w:(y+1)*w])
-		}
-	}
+// weights returns the splines of sample i: the first and their weights.
+func (b *basis) weights(i int) (first int, w []float32) {
+	return b.first[i], b.w[b.taps*i : b.taps*(i+1)]
 }
 
-// downRows writes Bᵀ·src, where B works down the columns: dst has m rows of w,
-// src n.
-func (b *basis) downRows(l row.Lanes, dst, src []float32, w int) {
-	for j, wt := range b.wt {
-		l.FirSet(dst[j*w:(j+1)*w], wt, src, b.lo[j]*w, w)
+// upRows writes B·src, where B works down the columns: dst has n rows of w, src
+// m.
+func (b *basis) upRows(l row.Lanes, dst, src []float32, w int) {
+	for y := range b.n {
+		f, wt := b.weights(y)
+		l.FirSet(dst[y*w:(y+1)*w], wt, src, f*w, w)
 	}
 }
 

@@ -14,7 +14,12 @@ func benchProblem(b *testing.B, t, h, w int) Problem {
 	for j := range code {
 		code[j] = float32(rng.IntN(2))
 	}
-	m, err := optics.NewModel(optics.Geometry{T: t, H: h, W: w, Code: code, StreakBlur: optics.Blur{SigmaX: 1, SigmaY: 1}, StreakPad: 4, ReferenceBlur: optics.Blur{SigmaX: 1, SigmaY: 1}})
+	const turn, grow = 0.01, 1.02 // a view as of a real station
+	view, err := optics.NewView([9]float64{grow, -turn, 3.3, turn, grow, 2.6, 0, 0, 1}, w, h, w+16, h+16, 4)
+	if err != nil {
+		b.Fatal(err)
+	}
+	m, err := optics.NewModel(optics.Geometry{T: t, H: h, W: w, Code: code, StreakBlur: optics.Blur{SigmaX: 1, SigmaY: 1}, StreakPad: 4, View: view, ReferenceBlur: optics.Blur{SigmaX: 1, SigmaY: 1}})
 	if err != nil {
 		b.Fatal(err)
 	}
@@ -25,9 +30,11 @@ func benchProblem(b *testing.B, t, h, w int) Problem {
 		x[j] = float32(200 * gauss(d, float64(w)/12))
 	}
 	rows, cols := m.StreakShape()
-	p := Problem{Model: m, Streak: make([]float32, rows*cols), Reference: make([]float32, h*w)}
+	p := Problem{Model: m, Streak: make([]float32, rows*cols)}
+	rr, rc := m.ReferenceShape()
+	p.Reference = make([]float32, rr*rc)
 	m.Forward(p.Streak, p.Reference, x)
-	p.StreakVar, p.ReferenceVar = constant(rows*cols, 100), constant(h*w, 100)
+	p.StreakVar, p.ReferenceVar = constant(rows*cols, 100), constant(rr*rc, 100)
 	return p
 }
 

@@ -1,5 +1,7 @@
 package solve
 
+import "unsheard/pipeline/solve/row"
+
 // chunkRows is the height of the chunks in which planes are worked.
 const chunkRows = 16
 
@@ -14,7 +16,7 @@ func chunks(rows int) int { return (rows + chunkRows - 1) / chunkRows }
 //  2. both: blur along columns, dual step, transposed blur along rows
 //  3. both: transposed blur along columns
 //  4. reference: transposed view
-func (e *engine) dataStep() {
+func (e *engine) dataStep(count bool) {
 	for _, b := range e.bands {
 		copy(e.sum[b.y0*e.w:], b.sum)
 	}
@@ -31,9 +33,9 @@ func (e *engine) dataStep() {
 	})
 	e.each(ns+nr, func(j int) {
 		if j < nr {
-			e.r.middle(j)
+			e.r.middle(j, e.lanes, count)
 		} else {
-			e.s.middle(j - nr)
+			e.s.middle(j-nr, e.lanes, count)
 		}
 	})
 	e.each(ns+nr, func(j int) {
@@ -88,11 +90,15 @@ func (e *core) referenceIn(j int) {
 	a.spread.Along(a.tmp, a.plane, lo, hi)
 }
 
-// middle ends the blur, steps the dual and begins the transposed blur.
-func (a *arm) middle(j int) {
+// middle ends the blur, steps the dual and begins the transposed blur; with
+// count it also takes χ².
+func (a *arm) middle(j int, lanes row.Lanes, count bool) {
 	lo, hi := a.limits(j)
 	a.spread.Across(a.bar, a.tmp, lo, hi)
-	a.chunks[j] = a.step(lo*a.spread.Cols, hi*a.spread.Cols)
+	if count {
+		a.chunks[j] = a.ahead(lo*a.spread.Cols, hi*a.spread.Cols)
+	}
+	a.step(lo*a.spread.Cols, hi*a.spread.Cols, lanes)
 	a.spreadT.Along(a.cast, a.dual, lo, hi)
 }
 
@@ -109,23 +115,22 @@ func (a *arm) total() {
 }
 
 // step is the relaxed proximal step of the convex conjugate of
-// ½Σ(·−data)²/vari for pixels lo ≤ j < hi; it returns their χ². The operator
-// is linear, so the model at the primal step v is the mean of those at 2v − x
-// and at x, and the model of the relaxed cube follows by the same relaxation;
-// rounding errors die out by |1−ρ/2| per step.
-func (a *arm) step(lo, hi int) (chi float64) {
+// ½Σ(·−data)²/vari for pixels lo ≤ j < hi. The operator is linear, so the model
+// at the primal step v is the mean of those at 2v − x and at x, and the model
+// of the relaxed cube follows by the same relaxation; rounding errors die out
+// by |1−ρ/2| per step.
+func (a *arm) step(lo, hi int, lanes row.Lanes) {
+	cut := func(v []float32) []float32 { return v[lo:hi] }
+	lanes.Fit(row.Data{Dual: cut(a.dual), Now: cut(a.now), Bar: cut(a.bar), Data: cut(a.data), Vari: cut(a.vari), Sigma: cut(a.sigma), Inv: cut(a.inv)}, a.scale, step)
+}
+
+// ahead is χ² at the primal step v of the pixels that step is about to take.
+func (a *arm) ahead(lo, hi int) (chi float64) {
 	for j := lo; j < hi; j++ {
-		bar, old, v := a.bar[j]*a.scale, a.now[j], a.vari[j]
-		at := (bar + old) / 2
-		a.now[j] = old + float32(relax*(at-old))
-		if v <= 0 {
-			continue
+		if v := a.vari[j]; v > 0 {
+			d := float64((float32(a.bar[j]*a.scale)+a.now[j])/2 - a.data[j])
+			chi += float64(d*d) / float64(v)
 		}
-		d := float64(at - a.data[j])
-		chi += float64(d*d) / float64(v)
-		u := a.dual[j] + float32(a.sigma[j]*(bar-a.data[j]))
-		u = float32(u*a.inv[j]) - a.dual[j]
-		a.dual[j] = flush(a.dual[j] + float32(relax*u))
 	}
 	return chi
 }

@@ -41,9 +41,9 @@ type core struct {
 // only, from copies of the extrapolated rows on both sides of the edge.
 type engine struct {
 	*core
-	bands        []*band
-	alpha, sigma float32
-	lambda       float32
+	bands []*band
+	alpha float32
+	ball  row.Ball
 }
 
 // band is a range of rows y0 ≤ y < y1 of the cube, stored plane after plane.
@@ -74,7 +74,7 @@ type arm struct {
 	scale      float32   // of the model after the blur and of its adjoint
 	chunks     []float64 // χ² by chunks of rows
 	used       int
-	chi2       float64
+	chi2       float64 // at the last iteration with count
 }
 
 // bandRows is the height of a band: small enough for a few cores at 64 rows,
@@ -91,7 +91,7 @@ func newCore(m *optics.Model, workers int) *core {
 	g := m.Geometry()
 	rows, cols := m.StreakShape()
 	rr, rc := m.ReferenceShape()
-	e := &core{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers, lanes: row.Best()}
+	e := &core{m: m, t: g.T, h: g.H, w: g.W, step: g.Step, pad: g.StreakPad, cols: cols, workers: workers, lanes: g.Lanes()}
 	e.view = g.View
 	e.own, e.col = make([]float32, e.h*e.w), make([]float32, rows*cols)
 	e.castS = make([]float32, rows*cols)
@@ -204,8 +204,8 @@ func (e *engine) steps(gamma, typical, lambda, alpha float64) {
 	for j := range e.own {
 		e.own[j] += float32((4 + 2*alpha) * stepMargin / gamma)
 	}
-	e.alpha, e.lambda = float32(alpha), float32(lambda)
-	e.sigma = float32(1 / (gamma * stepMargin * 2 * max(1, alpha)))
+	e.alpha = float32(alpha)
+	e.ball = row.Ball{Sigma: float32(1 / (gamma * stepMargin * 2 * max(1, alpha))), Alpha: e.alpha, Lambda: float32(lambda)}
 }
 
 // dataSteps sets the data's dual steps and its part of the primal ones.
@@ -246,7 +246,7 @@ const (
 // of the primal step v.
 func (e *engine) iterate(count bool) (dx, total, square float64) {
 	e.each(len(e.bands), func(j int) { e.sweep(j, count) })
-	e.dataStep()
+	e.dataStep(count)
 	for _, b := range e.bands {
 		dx += b.dx
 		total += b.total
@@ -264,7 +264,7 @@ func (e *engine) sweep(j int, count bool) {
 	clear(b.sum)
 	code := e.m.Geometry().Code
 	a := plane{rows: rows, w: e.w, own: e.own[b.y0*e.w:][:n], code: code[b.y0*e.w:][:n], back: e.backR[b.y0*e.w:][:n],
-		castStride: e.cols, sum: b.sum, alpha: e.alpha, sigma: e.sigma, lambda: e.lambda,
+		castStride: e.cols, sum: b.sum, alpha: e.alpha, ball: e.ball, lanes: e.lanes,
 		last: b.y1 == e.h, count: count, zero: e.zero, first: true}
 	for k := range e.t {
 		cut := func(v []float32) []float32 { return v[k*n : (k+1)*n] }
@@ -295,7 +295,7 @@ func (e *engine) edge(j int) {
 	n := (b.y1 - b.y0) * e.w
 	for k := range e.t {
 		lo, hi := (k+1)*n-e.w, (k+1)*n
-		row := func(v []float32, k int) []float32 { return v[k*e.w : (k+1)*e.w] }
-		dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], row(b.bottom, k), row(below.top, k), row(b.bottom, min(k+1, e.t-1)), e.alpha, e.sigma, e.lambda)
+		cut := func(v []float32, k int) []float32 { return v[k*e.w : (k+1)*e.w] }
+		e.lanes.Dual(b.p[lo:hi], b.q[lo:hi], b.r[lo:hi], cut(b.bottom, k), cut(below.top, k), cut(b.bottom, min(k+1, e.t-1)), e.ball, step)
 	}
 }

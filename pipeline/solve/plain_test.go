@@ -106,11 +106,11 @@ func (s *plain) iterate() {
 				u := [3]float64{float64(s.p[j]), float64(s.q[j]), float64(s.r[j])}
 				old := u
 				for a := range u {
-					u[a] += float64(e.sigma) * d[a]
+					u[a] += float64(e.ball.Sigma) * d[a]
 				}
 				f := 1.0
-				if l := math.Sqrt(u[0]*u[0] + u[1]*u[1] + u[2]*u[2]); l > float64(e.lambda) {
-					f = float64(e.lambda) / l
+				if l := math.Sqrt(u[0]*u[0] + u[1]*u[1] + u[2]*u[2]); l > float64(e.ball.Lambda) {
+					f = float64(e.ball.Lambda) / l
 				}
 				s.p[j] = float32(old[0] + relax*(u[0]*f-old[0]))
 				s.q[j] = float32(old[1] + relax*(u[1]*f-old[1]))

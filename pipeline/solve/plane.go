@@ -1,12 +1,19 @@
 package solve
 
-import "math"
+import (
+	"math"
+
+	"unsheard/pipeline/solve/row"
+)
 
 // tiny is the magnitude under which the cube and the duals are set to 0.
 // Relaxation shrinks a dark voxel by a constant factor per iteration, and the
 // projection a dual whose neighbours push outwards; without a floor they would
 // become denormal, and arithmetic on those costs a hundred cycles each.
 const tiny = 0x1p-60
+
+// step is the relaxed step of both loops.
+var step = row.Step{Rho: relax, Tiny: tiny}
 
 // tinyBits is tiny without its sign bit, shifted up by one.
 const tinyBits = (127 - 60) << 24
@@ -29,12 +36,13 @@ type plane struct {
 	castStride    int       // stride of both
 	streak        []float32 // streak plane of the band from its first row in plane k, added to
 	sum           []float32 // reference plane of the band, added to
-	alpha, sigma  float32   // weight of ∂t; dual step
-	lambda        float32   // radius of the dual balls
-	first         bool      // k = 0: no plane k−1 to step
-	last          bool      // the band's last row is the cube's last row
-	dx            float64   // with count: Σ|v − x|, v the primal step
-	total, square float64   // with count: Σ v and Σ v²
+	alpha         float32   // weight of ∂t
+	ball          row.Ball  // dual step
+	lanes         row.Lanes
+	first         bool    // k = 0: no plane k−1 to step
+	last          bool    // the band's last row is the cube's last row
+	dx            float64 // with count: Σ|v − x|, v the primal step
+	total, square float64 // with count: Σ v and Σ v²
 	count         bool
 	zero          []float32 // w zeros
 }
@@ -97,7 +105,7 @@ func (a *plane) dualRow(y int, next []float32) {
 	} else if !a.last {
 		return
 	}
-	dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.alpha, a.sigma, a.lambda)
+	a.lanes.Dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.ball, step)
 }
 
 // primal is the first half of step for one row. Products are rounded before
@@ -125,36 +133,6 @@ func primal(x, now, code, own, cast, col, back, p, q, qUp, r, rBack, streak, sum
 		x[i], now[i] = flush(old+float32(relax*d)), e
 		streak[i] += float32(c * e)
 		sum[i] += e
-	}
-}
-
-// dual is the second half of step for one row. The last pixel has no neighbour
-// on the right; standing in for it itself it has a difference of 0.
-func dual(p, q, r, b, down, next []float32, alpha, sigma, lambda float32) {
-	m := len(b) - 1
-	dualRun(p[:m], q[:m], r[:m], b[:m], b[1:], down[:m], next[:m], alpha, sigma, lambda)
-	dualRun(p[m:], q[m:], r[m:], b[m:], b[m:], down[m:], next[m:], alpha, sigma, lambda)
-}
-
-// dualRun is dual where ahead holds the right-hand neighbours of b.
-func dualRun(p, q, r, b, ahead, down, next []float32, alpha, sigma, lambda float32) {
-	n := len(b)
-	p, q, r, ahead, down, next = p[:n], q[:n], r[:n], ahead[:n], down[:n], next[:n]
-	sigmaT := sigma * alpha
-	limit := lambda * lambda
-	for i := range b {
-		v, right := b[i], ahead[i]
-		p0, q0, r0 := p[i], q[i], r[i]
-		u0 := p0 + float32(sigma*(right-v))
-		u1 := q0 + float32(sigma*(down[i]-v))
-		u2 := r0 + float32(sigmaT*(next[i]-v))
-		if m := float32(u0*u0) + float32(u1*u1) + float32(u2*u2); m > limit {
-			f := lambda / float32(math.Sqrt(float64(m)))
-			u0, u1, u2 = u0*f, u1*f, u2*f
-		}
-		p[i] = flush(p0 + float32(relax*(u0-p0)))
-		q[i] = flush(q0 + float32(relax*(u1-q0)))
-		r[i] = flush(r0 + float32(relax*(u2-r0)))
 	}
 }
 

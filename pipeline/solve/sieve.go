@@ -6,12 +6,9 @@ import (
 	"unsheard/pipeline/solve/row"
 )
 
-// step is the relaxed step of the rows' loops.
-var step = row.Step{Rho: relax, Tiny: tiny}
-
 // sieve is the primal-dual loop over spline coefficients z, x = B·z with
-// B = Bt⊗By⊗Bx. The cube itself is never stored: with the fine plane of a
-// coarse time, P_j = By·z_j·Bxᵀ, and C∘P_j kept for all j,
+// B = Bt⊗By⊗Bx. The cube itself is never stored, and of the fine planes of the
+// coarse times, P_j = By·z_j·Bxᵀ, each worker holds one:
 //
 //	E[m] = Σ_j Σ_k Bt[k][j]·(C∘P_j)[m − k·step]
 //	Σ_k x = By·(Σ_j (Σ_k Bt[k][j])·z_j)·Bxᵀ
@@ -19,30 +16,34 @@ var step = row.Step{Rho: relax, Tiny: tiny}
 // and the adjoint takes the code out of the sum over k the same way. An
 // iteration goes in phases with barriers between them:
 //
-//  1. per coarse time j: cast the duals back, primal step, C∘P_j (plane)
-//  2. streak: gather E, blur along rows; the reference's sum; duals of the
-//     differences (inward)
+//  1. per group of coarse times, one after the other: cast the duals back,
+//     primal step, C∘P_j and what it adds to E and to Σ_j; dual step of the
+//     differences of the coarse time before (group.go)
+//  2. streak: add up the groups' E, blur along rows; the reference's sum;
+//     duals of the differences of each group's last coarse time, which look
+//     into the next group
 //  3. reference: view, blur along rows; streak: blur along columns, dual
 //     step, transposed blur along rows
 //  4. reference: the same; streak: transposed blur along columns
 //  5. reference: transposed blur along columns
 //  6. reference: transposed view
-//  7. reference: Byᵀ·back·Bx
+//  7. reference: Byᵀ·back·Bx, by chunks of coefficient rows
 //
-// Work is shared by coarse times and by chunks of rows, sums run in a fixed
-// order within one of them: the number of workers changes no bit.
+// Groups and chunks depend on the shape alone and sums run in a fixed order
+// within one and over them: the number of workers changes no bit.
 type sieve struct {
 	*core
 	spacing    [3]float64
 	bt, by, bx basis
 	z          []float32 // mt·my·mx
+	groups     []group
 	*workspace
 	volume float64 // voxels per coefficient
 	alpha  float32
 	sigma  float32
 	lambda float32
 	stats  [][3]float64
-	phase  [6]func(int)
+	phase  [7]func(worker, j int)
 	count  bool // of iterate
 }
 
@@ -51,25 +52,29 @@ type sieve struct {
 type workspace struct {
 	bar, tau   []float32 // mt·my·mx
 	px, py, pt []float32 // duals of the differences, likewise
-	lit        []float32 // C∘P_j, mt·H·W
-	work       []float32 // per j: my rows of W
-	grad       []float32 // the streak's gradient, mt·my·mx
-	turn       []float32 // per j: scratch of row.Lanes.Down
-	total      []float32 // Σ_j of the extrapolated coefficients, my·mx
+	streak     []float32 // the groups' parts of E, see group
+	totals     []float32 // and of Σ_j of the extrapolated coefficients, my·mx each
+	total      []float32 // their sum, my·mx
 	back       []float32 // the reference's gradient, likewise
 	fine       []float32 // my rows of W for the reference
 	none       []float32 // mx zeros
+	plane      []float32 // per worker, see desk
+	rows       []float32
+	grad       []float32
+	turned     []float32
 }
 
 // fit gives every slice its length for s.
 func (b *workspace) fit(s *sieve) {
-	n := s.by.m * s.bx.m
+	n, workers := s.by.m*s.bx.m, max(1, s.workers)
+	last := s.groups[len(s.groups)-1]
 	for _, v := range []struct {
 		p *[]float32
 		n int
 	}{{&b.bar, s.bt.m * n}, {&b.tau, s.bt.m * n}, {&b.px, s.bt.m * n}, {&b.py, s.bt.m * n}, {&b.pt, s.bt.m * n},
-		{&b.lit, s.bt.m * s.h * s.w}, {&b.work, s.bt.m * s.by.m * s.w}, {&b.grad, s.bt.m * n}, {&b.turn, s.bt.m * s.bx.line.DownWork()},
-		{&b.total, n}, {&b.back, n}, {&b.fine, s.by.m * s.w}, {&b.none, s.bx.m}} {
+		{&b.streak, last.at + last.rows*s.w}, {&b.totals, len(s.groups) * n},
+		{&b.total, n}, {&b.back, n}, {&b.fine, s.by.m * s.w}, {&b.none, s.bx.m},
+		{&b.plane, workers * s.h * s.w}, {&b.rows, workers * s.by.m * s.w}, {&b.grad, workers * n}, {&b.turned, workers * s.bx.line.DownWork()}} {
 		if cap(*v.p) < v.n {
 			*v.p = make([]float32, v.n)
 		}
@@ -89,111 +94,37 @@ func (c *core) sieve(spacing [3]float64) *sieve {
 		s.volume *= max(1, h)
 	}
 	s.stats = make([][3]float64, s.bt.m)
+	s.groups = s.share()
 	s.setPhases()
 	return s
 }
 
-// plane is phase 1 for coarse time j.
-func (s *sieve) plane(j int) {
-	my, mx := s.by.m, s.bx.m
-	n := my * mx
-	g := s.castBack(j, s.castS)
-	s.lanes.Add(g, s.bt.sum(j), s.back)
-	s.stats[j] = [3]float64{}
-	for r := range my {
-		lo := j*n + r*mx
-		if s.lambda > 0 {
-			up, before := s.none, s.none
-			if r > 0 {
-				up = s.py[lo-mx : lo]
-			}
-			if j > 0 {
-				before = s.pt[lo-n : lo-n+mx]
-			}
-			s.lanes.Diverge(g[r*mx:(r+1)*mx], s.px[lo:lo+mx], s.py[lo:lo+mx], up, s.pt[lo:lo+mx], before, s.alpha)
-		}
-		z, bar := s.z[lo:lo+mx], s.bar[lo:lo+mx]
-		s.lanes.Project(z, bar, g[r*mx:(r+1)*mx], s.tau[lo:lo+mx], step)
-		if s.count {
-			d, t, t2 := change(bar, z)
-			s.stats[j][0] += d
-			s.stats[j][1] += t
-			s.stats[j][2] += t2
-		}
-	}
-	s.spreadOut(j, s.bar, s.m.Geometry().Code)
-}
-
-// castBack returns Byᵀ·(C∘Σ_k Bt[k][j]·cast[· + k·step])·Bx, my rows of mx. It
-// uses plane j of lit.
-func (s *sieve) castBack(j int, cast []float32) []float32 {
-	w, stride, n := s.w, s.step*s.cols, s.by.m*s.bx.m
-	rows, q := s.work[j*s.by.m*w:][:s.by.m*w], s.lit[j*s.h*w:][:s.h*w]
-	code := s.m.Geometry().Code
-	for y := range s.h {
-		s.lanes.FirMul(q[y*w:(y+1)*w], s.bt.wt[j], cast, (y+s.pad+s.bt.lo[j]*s.step)*s.cols+s.pad, stride, code[y*w:(y+1)*w])
-	}
-	s.by.downRows(s.lanes, rows, q, w)
-	g, size := s.grad[j*n:(j+1)*n], s.bx.line.DownWork()
-	s.lanes.Down(s.bx.line, g, rows, s.turn[j*size:(j+1)*size], s.by.m)
-	return g
-}
-
-// spreadOut writes P_j of coefficients v to the plane j of lit, times code
-// unless that is nil.
-func (s *sieve) spreadOut(j int, v, code []float32) {
-	my, mx, w := s.by.m, s.bx.m, s.w
-	work := s.work[j*my*w:][:my*w]
-	for r := range my {
-		s.lanes.Up(s.bx.line, work[r*w:(r+1)*w], v[(j*my+r)*mx:][:mx])
-	}
-	s.by.upRows(s.lanes, s.lit[j*s.h*w:][:s.h*w], work, w, code)
-}
-
-// gather writes E of the planes of lit to rows of the streak plane and blurs
-// it along rows.
-func (s *sieve) gather(chunk int) {
-	a := &s.s
-	lo, hi := a.limits(chunk)
-	clear(a.plane[lo*s.cols : hi*s.cols])
-	for r := lo; r < hi; r++ {
-		m := r - s.pad
-		if m < 0 || m > s.h-1+(s.t-1)*s.step {
-			continue
-		}
-		dst := a.plane[r*s.cols+s.pad:][:s.w]
-		k0, k1 := 0, min(s.t-1, m/s.step)
-		if over := m - s.h + 1; over > 0 {
-			k0 = (over + s.step - 1) / s.step
-		}
-		for j, wt := range s.bt.wt {
-			a0 := max(k0, s.bt.lo[j])
-			a1 := min(k1, s.bt.lo[j]+len(wt)-1)
-			if a0 <= a1 {
-				s.lanes.Fir(dst, wt[a0-s.bt.lo[j]:a1-s.bt.lo[j]+1], s.lit, (j*s.h+m-a0*s.step)*s.w, -s.step*s.w)
-			}
-		}
-	}
-	a.spread.Along(a.tmp, a.plane, lo, hi)
-}
-
-// collapse writes Σ_k x of coefficients v to the window plane sum.
-func (s *sieve) collapse(v []float32) {
-	my, mx, w := s.by.m, s.bx.m, s.w
+// collapse writes Σ_k x to the window plane sum, from the groups' totals.
+func (s *sieve) collapse() {
+	w, mx, n := s.w, s.bx.m, len(s.total)
 	clear(s.total)
-	for j := range s.bt.m {
-		s.lanes.Add(s.total, s.bt.sum(j), v[j*my*mx:(j+1)*my*mx])
+	for g := range s.groups {
+		s.lanes.Add(s.total, 1, s.totals[g*n:(g+1)*n])
 	}
-	for r := range my {
+	for r := range s.by.m {
 		s.lanes.Up(s.bx.line, s.fine[r*w:(r+1)*w], s.total[r*mx:(r+1)*mx])
 	}
-	s.by.upRows(s.lanes, s.sum, s.fine, w, nil)
+	s.by.upRows(s.lanes, s.sum, s.fine, w)
 }
 
 // condense writes Byᵀ·src·Bx of a window plane to back.
 func (s *sieve) condense(src []float32) {
-	s.by.downRows(s.lanes, s.fine, src, s.w)
-	s.lanes.Down(s.bx.line, s.back, s.fine, s.turn, s.by.m)
+	s.eachBy(chunks(s.by.m), func(worker, j int) { s.condenseRows(s.desk(worker), src, j) })
+}
+
+// condenseRows is condense for chunk j of back's rows.
+func (s *sieve) condenseRows(d desk, src []float32, j int) {
+	w, mx := s.w, s.bx.m
+	lo, hi := j*chunkRows, min((j+1)*chunkRows, s.by.m)
+	for r := lo; r < hi; r++ {
+		s.lanes.FirSet(s.fine[r*w:(r+1)*w], s.by.wt[r], src, s.by.lo[r]*w, w)
+	}
+	s.lanes.Down(s.bx.line, s.back[lo*mx:hi*mx], s.fine[lo*w:hi*w], d.turned, hi-lo)
 }
 
 // inward is the dual step of the differences of coarse time j.
@@ -218,17 +149,17 @@ func (s *sieve) inward(j int) {
 func (s *sieve) iterate(count bool) (dx, total, square float64) {
 	s.count = count
 	c := s.core
-	ns, nr, planes := len(c.s.chunks), len(c.r.chunks), s.bt.m
-	s.each(planes, s.phase[0])
+	ns, nr, edges := len(c.s.chunks), len(c.r.chunks), len(s.groups)
+	s.eachBy(edges, s.phase[0])
 	if s.lambda <= 0 {
-		planes = 0
+		edges = 0
 	}
-	s.each(1+ns+planes, s.phase[1])
-	s.each(nr+ns, s.phase[2])
-	s.each(nr+ns, s.phase[3])
-	s.each(nr, s.phase[4])
-	s.each(chunks(s.h), s.phase[5])
-	s.condense(s.backR)
+	s.eachBy(1+ns+edges, s.phase[1])
+	s.eachBy(nr+ns, s.phase[2])
+	s.eachBy(nr+ns, s.phase[3])
+	s.eachBy(nr, s.phase[4])
+	s.eachBy(chunks(s.h), s.phase[5])
+	s.eachBy(chunks(s.by.m), s.phase[6])
 	c.s.total()
 	c.r.total()
 	for _, v := range s.stats {
@@ -239,38 +170,39 @@ func (s *sieve) iterate(count bool) (dx, total, square float64) {
 	return dx, total, square
 }
 
-// setPhases makes phases 1 to 6 once, so that the loop does not allocate.
+// setPhases makes the phases once, so that the loop does not allocate.
 func (s *sieve) setPhases() {
 	c := s.core
 	ns, nr := len(c.s.chunks), len(c.r.chunks)
-	s.phase = [6]func(int){
-		s.plane,
-		func(j int) {
+	s.phase = [7]func(worker, j int){
+		func(worker, g int) { s.sweep(g, s.desk(worker)) },
+		func(_, j int) {
 			switch {
 			case j == 0:
-				s.collapse(s.bar)
+				s.collapse()
 			case j <= ns:
 				s.gather(j - 1)
 			default:
-				s.inward(j - 1 - ns)
+				s.inward(s.groups[j-1-ns].hi - 1)
 			}
 		},
-		func(j int) {
+		func(_, j int) {
 			if j < nr {
 				c.referenceIn(j)
 			} else {
-				c.s.middle(j - nr)
+				c.s.middle(j-nr, c.lanes, s.count)
 			}
 		},
-		func(j int) {
+		func(_, j int) {
 			if j < nr {
-				c.r.middle(j)
+				c.r.middle(j, c.lanes, s.count)
 			} else {
 				c.s.out(c.castS, j-nr)
 			}
 		},
-		func(j int) { c.r.out(c.r.plane, j) },
-		c.viewBack,
+		func(_, j int) { c.r.out(c.r.plane, j) },
+		func(_, j int) { c.viewBack(j) },
+		func(worker, j int) { s.condenseRows(s.desk(worker), c.backR, j) },
 	}
 }
 
@@ -285,8 +217,8 @@ func (s *sieve) steps(gamma, typical, lambda, alpha float64) {
 	if lambda > 0 {
 		tv = float32(s.volume * (4 + 2*alpha) * stepMargin / gamma)
 	}
-	s.each(s.bt.m, func(j int) {
-		g := s.castBack(j, s.col)
+	s.eachBy(s.bt.m, func(worker, j int) {
+		g := s.castBack(j, s.desk(worker), s.col)
 		s.lanes.Add(g, s.bt.sum(j), s.back)
 		tau := s.tau[j*n : (j+1)*n]
 		for i, v := range g {
@@ -309,10 +241,12 @@ func (s *sieve) store(x []float32) {
 		s.bar[j] = max(v, 0)
 	}
 	clear(x)
+	d := s.desk(0)
 	for j := range s.bt.m {
-		s.spreadOut(j, s.bar, nil)
+		s.upColumns(j, d)
+		s.by.upRows(s.lanes, d.plane, d.rows, s.w)
 		for k, w := range s.bt.wt[j] {
-			s.lanes.Add(x[(s.bt.lo[j]+k)*n:][:n], w, s.lit[j*n:(j+1)*n])
+			s.lanes.Add(x[(s.bt.lo[j]+k)*n:][:n], w, d.plane)
 		}
 	}
 }
@@ -329,9 +263,8 @@ func (s *sieve) begin(old *sieve) {
 	}
 	s.fit(s)
 	copy(s.bar, s.z)
-	code := s.m.Geometry().Code
-	s.each(s.bt.m, func(j int) { s.spreadOut(j, s.bar, code) })
-	s.collapse(s.bar)
+	s.eachBy(len(s.groups), func(worker, g int) { s.show(g, s.desk(worker)) })
+	s.collapse()
 	a, b := &s.core.s, &s.core.r
 	s.each(len(a.chunks), s.gather)
 	s.each(len(a.chunks), func(j int) {

@@ -2,11 +2,14 @@ package solve
 
 import (
 	"context"
+	"encoding/binary"
+	"hash/fnv"
 	"math"
 	"math/rand/v2"
 	"slices"
 	"testing"
 
+	"unsheard/pipeline/optics"
 	"unsheard/pipeline/solve/row"
 )
 
@@ -142,7 +145,7 @@ func TestSieveIsB(t *testing.T) {
 			adj := transposed(s, x)
 			s.condense(c.backR)
 			for j := range s.bt.m {
-				g := s.castBack(j, c.castS)
+				g := s.castBack(j, s.desk(0), c.castS)
 				s.lanes.Add(g, s.bt.sum(j), s.back)
 				for i, v := range g {
 					if want := adj[j*len(g)+i]; math.Abs(float64(v)-want) > 1e-4 {
@@ -260,21 +263,74 @@ func TestSieveWorkersChangeNoBit(t *testing.T) {
 	}
 }
 
-// The vector loops give the bits of the plain ones through a whole solve.
+// The vector loops give the bits of the plain ones through whole solves, model
+// and all.
 func TestLanesChangeNoBit(t *testing.T) {
-	var want []float32
-	for _, lanes := range []row.Lanes{{}, row.Best()} {
-		s := preparedSieve(awkward(t, 9, 40, 37, 1), 2, [3]float64{1.5, 2, 2}, .1)
-		s.lanes = lanes
-		for range 40 {
-			s.iterate(true)
-		}
-		if want == nil {
-			want = s.z
-		} else if !slices.Equal(s.z, want) {
-			t.Errorf("%v loops give other bits than plain ones", lanes)
+	for _, d := range [][4]int{{9, 40, 37, 1}, {13, 24, 64, 1}, {5, 9, 101, 2}, {1, 30, 20, 1}, {30, 3, 12, 1}} {
+		for _, h := range [][3]float64{{1, 1, 1}, {1.5, 2, 2}, {2, 3, 3}, {3, 4.5, 4.5}} {
+			var want *sieve
+			for _, scalar := range []bool{true, false} {
+				s := preparedSieve(scalarly(t, awkward(t, d[0], d[1], d[2], d[3]), scalar), 2, h, .1)
+				for range 40 {
+					s.iterate(true)
+				}
+				if want == nil {
+					want = s
+				} else if !slices.Equal(s.z, want.z) || !slices.Equal(s.core.s.dual, want.core.s.dual) || !slices.Equal(s.core.r.now, want.core.r.now) || s.core.s.chi2 != want.core.s.chi2 {
+					t.Errorf("%v %v: %v loops give other bits than plain ones", d, h, s.lanes)
+				}
+			}
 		}
 	}
+}
+
+// scalarly is the problem with plain loops, or with the best.
+func scalarly(t testing.TB, p Problem, scalar bool) Problem {
+	t.Helper()
+	g := p.Model.Geometry()
+	g.Scalar = scalar
+	m, err := optics.NewModel(g)
+	if err != nil {
+		t.Fatal(err)
+	}
+	p.Model = m
+	return p
+}
+
+// TestLanesSameHash compares the bits of all that a whole reconstruction
+// returns, with splines and on voxels.
+func TestLanesSameHash(t *testing.T) {
+	s := newStation(12, 30, 41)
+	p, _ := s.shot(t, func(t, x, y float64) float64 { return gauss((x-12-t)*(x-12-t)+(y-14)*(y-14), 3) }, 200, 1)
+	for name, solve := range map[string]func(context.Context, Problem, []float32, Options) (*Result, error){
+		"Auto":  func(ctx context.Context, p Problem, _ []float32, o Options) (*Result, error) { return Auto(ctx, p, o) },
+		"Solve": Solve,
+	} {
+		var want uint64
+		for _, workers := range []int{1, 3} {
+			for _, scalar := range []bool{true, false} {
+				r, err := solve(context.Background(), scalarly(t, p, scalar), nil, Options{Workers: workers, MaxIter: 120})
+				if err != nil {
+					t.Fatal(err)
+				}
+				got := hashOf(r.X, r.StreakModel, r.ReferenceModel, r.StreakVar, r.ReferenceVar)
+				if want == 0 {
+					want = got
+				} else if got != want {
+					t.Errorf("%s, %d workers, scalar %v: hash %x, want %x", name, workers, scalar, got, want)
+				}
+			}
+		}
+	}
+}
+
+// hashOf is FNV-1a of the bits.
+func hashOf(parts ...[]float32) uint64 {
+	h := fnv.New64a()
+	for _, p := range parts {
+		_ = binary.Write(h, binary.LittleEndian, p) // a hash takes all
+	}
+	return h.Sum64()
 }
 
 func TestSieveAllocatesNothing(t *testing.T) {
