@@ -135,16 +135,17 @@ func TestSpikes(t *testing.T) {
 	}
 }
 
-// The sharpest light there is, single pixels lit for a frame, is no spike.
+// points are the sharpest light there is, single pixels lit for a frame.
+func points(t, x, y float64) float64 {
+	px, py, k := int(x+.5), int(y+.5), int(t)
+	if px%8 == 3 && py%8 == 4 && k%5 == (px/8+py/8)%5 {
+		return 1
+	}
+	return 0
+}
+
 func TestPointsAreNoSpikes(t *testing.T) {
 	s := newStation(16, 40, 40)
-	points := func(t, x, y float64) float64 {
-		px, py, k := int(x+.5), int(y+.5), int(t)
-		if px%8 == 3 && py%8 == 4 && k%5 == (px/8+py/8)%5 {
-			return 1
-		}
-		return 0
-	}
 	for seed, peak := range []float64{20, 200, 2000, 20000} {
 		p, _ := s.shot(t, points, peak, uint64(seed))
 		r, err := Auto(context.Background(), p, Options{MaxIter: 20})
@@ -153,6 +154,26 @@ func TestPointsAreNoSpikes(t *testing.T) {
 		}
 		if r.Spikes != 0 {
 			t.Errorf("%g pe: %d points of light taken for spikes", peak, r.Spikes)
+		}
+	}
+}
+
+// What no spline can show is shown by voxels, and said.
+func TestPointsAreVoxels(t *testing.T) {
+	s := newStation(16, 40, 40)
+	for _, peak := range []float64{200, 2000} {
+		p, truth := s.shot(t, points, peak, 1)
+		r, err := Auto(context.Background(), p, Options{Workers: 2})
+		if err != nil {
+			t.Fatal(err)
+		}
+		v, err := Solve(context.Background(), p, nil, Options{Workers: 2})
+		if err != nil {
+			t.Fatal(err)
+		}
+		t.Logf("%g pe: %.2f dB, χ² %.2f, voxels by themselves %.2f dB: %q", peak, psnr(r.X, truth), r.Chi2, psnr(v.X, truth), r.Notes)
+		if r.Spacing != [3]float64{} || len(r.Notes) == 0 || psnr(r.X, truth) < psnr(v.X, truth)-.5 {
+			t.Errorf("%g pe: spacing %v, %.2f dB, notes %q", peak, r.Spacing, psnr(r.X, truth), r.Notes)
 		}
 	}
 }

@@ -27,14 +27,15 @@ const (
 	// trialIter bounds a trial.
 	trialIter = 80
 	// rising is how much more than the least a rung must miss for finer ones
-	// not to be tried.
+	// not to be tried, once the frames are described at all.
 	rising = 1.02
 	// slack is how much more than the least, in χ² per pixel, a smoother cube
 	// may miss, at least; see allowed.
 	slack = 0.01
 	// better is how much less another timing or weight must miss.
 	better = 0.997
-	// misfit is the χ² per pixel that is worth a note.
+	// misfit is the χ² per pixel, hidden or not, from which on the frames are
+	// not described; it is worth a note.
 	misfit = 1.2
 )
 
@@ -110,7 +111,7 @@ func (a *auto) choose(ctx context.Context, o Options) (best trial, ok bool) {
 		miss := a.tried[j].miss
 		if j == 0 || miss < least {
 			least = miss
-		} else if miss > least*rising {
+		} else if miss > least*rising && least < misfit {
 			break
 		}
 	}
