@@ -105,14 +105,15 @@
 // An iteration with splines makes some 4 + 4 products per voxel between
 // coarse and fine times, 9/ht more between coarse and fine planes (ht the
 // spacing in time), and one blur, view and their transposes per arm; memory is
-// 4/ht + 24/v bytes per voxel, and 4/v more for each spacing tried. A choice with its last solves is about
-// 1000 to 1400 iterations. On voxels an iteration takes some 11 ns per voxel
-// on one core. Work is shared by Workers. A solve touches nothing global; a
-// Problem may be solved by several goroutines at once. Work is divided in ways
-// that depend on the shape alone, sums run in a fixed order, and products are
-// rounded before they are added (no fused multiply-add): the result has the
-// same bits for any number of workers. Magnitudes under 1e-18 are set to 0, so
-// no denormal numbers arise.
+// 24/v bytes per voxel, 4/v more for each spacing tried, and a part of the
+// streak plane per group of coarse times. A choice with its last solves is
+// about 1000 to 1400 iterations. On voxels an iteration takes some 11 ns per
+// voxel on one core. Work is shared by Workers. A solve touches nothing global;
+// a Problem may be solved by several goroutines at once. Work is divided in
+// ways that depend on the shape alone, sums run in a fixed order, and products
+// are rounded before they are added (no fused multiply-add): the result has
+// the same bits for any number of workers. Magnitudes under 1e-18 are set to 0,
+// so no denormal numbers arise.
 //
 // # References
 //
