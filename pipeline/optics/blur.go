@@ -153,12 +153,34 @@ func (k *kernel) convolve(dst, src []float32, lanes row.Lanes) {
 	if lo < hi {
 		lanes.FirSet(dst[lo:hi], k.w, src, lo-k.lo, -1)
 	}
-	k.ends(dst, src, 0, lo)
-	k.ends(dst, src, hi, n)
+	k.end(dst, src, 0, lo, lanes)
+	k.end(dst, src, hi, n, lanes)
 }
 
-// ends is convolve for the samples lo ≤ i < hi near an end.
-func (k *kernel) ends(dst, src []float32, lo, hi int) {
+// margin is the longest run of samples that end copies to have zeros around it.
+const margin = 128
+
+// end is convolve for the samples lo ≤ i < hi near an end. A sample beyond src
+// is a 0 that adds nothing.
+func (k *kernel) end(dst, src []float32, lo, hi int, lanes row.Lanes) {
+	var padded [margin]float32
+	reach := len(k.w) - 1
+	if hi-lo+reach > margin {
+		k.slowEnd(dst, src, lo, hi)
+		return
+	}
+	if lo == hi {
+		return
+	}
+	from := lo - k.lo - reach // sample of src that padded begins with
+	if a, b := max(from, 0), min(hi-k.lo, len(src)); a < b {
+		copy(padded[a-from:], src[a:b])
+	}
+	lanes.FirSet(dst[lo:hi], k.w, padded[:], reach, -1)
+}
+
+// slowEnd is end without the copy.
+func (k *kernel) slowEnd(dst, src []float32, lo, hi int) {
 	for i := lo; i < hi; i++ {
 		var sum float32
 		for j, w := range k.w {

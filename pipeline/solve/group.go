@@ -63,29 +63,27 @@ func (s *sieve) part(g int) (streak, total []float32) {
 // sweep is phase 1 for group g. The primal step of coarse time j reads the
 // differences' duals of j − 1 as they were, so that their step follows it.
 func (s *sieve) sweep(g int, d desk) {
-	streak, total := s.part(g)
-	clear(streak)
+	_, total := s.part(g)
 	clear(total)
-	lo, hi := s.groups[g].lo, s.groups[g].hi
+	lo, hi, top := s.groups[g].lo, s.groups[g].hi, 0
 	for j := lo; j < hi; j++ {
 		s.castBack(j, d, s.castS)
 		s.primal(j, d.grad, total)
 		if s.lambda > 0 && j > lo {
 			s.inward(j - 1) // while its rows are in the cache
 		}
-		s.spreadOut(j, d, g)
+		top = s.spreadOut(j, d, g, top)
 	}
 }
 
 // show is what a sweep writes, for the coefficients as they are.
 func (s *sieve) show(g int, d desk) {
-	streak, total := s.part(g)
-	clear(streak)
+	_, total := s.part(g)
 	clear(total)
-	n := len(total)
+	n, top := len(total), 0
 	for j := s.groups[g].lo; j < s.groups[g].hi; j++ {
 		s.lanes.Add(total, s.bt.sum(j), s.bar[j*n:(j+1)*n])
-		s.spreadOut(j, d, g)
+		top = s.spreadOut(j, d, g, top)
 	}
 }
 
@@ -147,33 +145,46 @@ func (s *sieve) upColumns(j int, d desk) {
 }
 
 // spreadOut adds what C∘P_j gives to the group's part of E, row by row behind
-// the rows of the plane it needs.
-func (s *sieve) spreadOut(j int, d desk, g int) {
+// the rows of the plane it needs. Of the part's rows the first top have been
+// written before; it returns how many are now.
+func (s *sieve) spreadOut(j int, d desk, g, top int) int {
 	w, code := s.w, s.m.Geometry().Code
 	s.upColumns(j, d)
-	for y := range s.h {
-		f, wt := s.by.weights(y)
-		s.lanes.FirMul(d.plane[y*w:(y+1)*w], wt, d.rows, f*w, w, code[y*w:(y+1)*w])
-		s.streakRow(j, d.plane, g, y)
+	// Row y of the plane and E's row y + lo·step, which is row y + from of
+	// the part.
+	from := s.bt.lo[j]*s.step - s.groups[g].from
+	streak, _ := s.part(g)
+	for y := range s.h + max(0, len(s.bt.wt[j])-1)*s.step {
+		if y < s.h {
+			f, wt := s.by.weights(y)
+			s.lanes.FirMul(d.plane[y*w:(y+1)*w], wt, d.rows, f*w, w, code[y*w:(y+1)*w])
+		}
+		for ; top < y+from; top++ {
+			clear(streak[top*w : (top+1)*w])
+		}
+		s.streakRow(streak[(y+from)*w:(y+from+1)*w], j, d.plane, y, y+from == top)
+		top = max(top, y+from+1)
 	}
-	for y := s.h; y < s.h+(len(s.bt.wt[j])-1)*s.step; y++ {
-		s.streakRow(j, d.plane, g, y)
-	}
+	return top
 }
 
-// streakRow adds Σ_k Bt[k][j]·plane[y − (k−lo)·step] to E's row y + lo·step,
-// for the k where it lies in the window.
-func (s *sieve) streakRow(j int, plane []float32, g, y int) {
+// streakRow adds Σ_k Bt[k][j]·plane[y − (k−lo)·step], for the k where it lies in
+// the window, to a row of E, or sets a row that is new.
+func (s *sieve) streakRow(dst []float32, j int, plane []float32, y int, fresh bool) {
 	wt := s.bt.wt[j]
 	first, last := 0, min(len(wt)-1, y/s.step)
 	if over := y - s.h + 1; over > 0 {
 		first = (over + s.step - 1) / s.step
 	}
-	if first > last {
-		return
+	switch {
+	case first > last && fresh:
+		clear(dst)
+	case first > last:
+	case fresh:
+		s.lanes.FirSet(dst, wt[first:last+1], plane, (y-first*s.step)*s.w, -s.step*s.w)
+	default:
+		s.lanes.Fir(dst, wt[first:last+1], plane, (y-first*s.step)*s.w, -s.step*s.w)
 	}
-	at := s.groups[g].at + (y+s.bt.lo[j]*s.step-s.groups[g].from)*s.w
-	s.lanes.Fir(s.streak[at:at+s.w], wt[first:last+1], plane, (y-first*s.step)*s.w, -s.step*s.w)
 }
 
 // gather adds the groups' parts of E up in rows of the streak plane, in the

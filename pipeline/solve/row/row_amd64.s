@@ -617,33 +617,112 @@ TEXT ·mulBlocks(SB), NOSPLIT, $0-56
 	MOVQ pick+40(FP), DI
 	MOVQ w+48(FP), R8
 
-block:
-	TESTQ  CX, CX
-	JLE    done
-	MOVL   4(DX), R9
-	SUBL   (DX), R9
-	VXORPS Y0, Y0, Y0
+pair:
+	CMPQ    CX, $0x02
+	JL      last
+	MOVLQSX (DX), R10
+	MOVLQSX 4(DX), R9
+	SUBQ    R10, R9
+	VXORPS  Y0, Y0, Y0
+	MOVLQSX 4(DX), R10
+	MOVLQSX 8(DX), R13
+	SUBQ    R10, R13
+	VXORPS  Y1, Y1, Y1
+	LEAQ    (SI)(R9*4), R10
+	LEAQ    (DI)(R9*8), R11
+	MOVQ    R9, R12
+	SHLQ    $0x05, R12
+	ADDQ    R8, R12
 
-slots:
-	TESTL     R9, R9
-	JLE       sum
-	MOVLQSX   (SI), R10
+both:
+	TESTQ     R9, R9
+	JLE       rest_b
+	TESTQ     R13, R13
+	JLE       rest_a
+	MOVLQSX   (SI), R14
+	VPMOVZXBD (DI), Y2
+	VPERMPS   (BX)(R14*4), Y2, Y2
+	VMULPS    (R8), Y2, Y2
+	VADDPS    Y2, Y0, Y0
+	ADDQ      $0x04, SI
+	ADDQ      $0x08, DI
+	ADDQ      $0x20, R8
+	DECQ      R9
+	MOVLQSX   (R10), R14
+	VPMOVZXBD (R11), Y2
+	VPERMPS   (BX)(R14*4), Y2, Y2
+	VMULPS    (R12), Y2, Y2
+	VADDPS    Y2, Y1, Y1
+	ADDQ      $0x04, R10
+	ADDQ      $0x08, R11
+	ADDQ      $0x20, R12
+	DECQ      R13
+	JMP       both
+
+rest_a:
+	TESTQ     R9, R9
+	JLE       rest_a_end
+	MOVLQSX   (SI), R14
+	VPMOVZXBD (DI), Y2
+	VPERMPS   (BX)(R14*4), Y2, Y2
+	VMULPS    (R8), Y2, Y2
+	VADDPS    Y2, Y0, Y0
+	ADDQ      $0x04, SI
+	ADDQ      $0x08, DI
+	ADDQ      $0x20, R8
+	DECQ      R9
+	JMP       rest_a
+
+rest_a_end:
+rest_b:
+	TESTQ     R13, R13
+	JLE       rest_b_end
+	MOVLQSX   (R10), SI
+	VPMOVZXBD (R11), Y2
+	VPERMPS   (BX)(SI*4), Y2, Y2
+	VMULPS    (R12), Y2, Y2
+	VADDPS    Y2, Y1, Y1
+	ADDQ      $0x04, R10
+	ADDQ      $0x08, R11
+	ADDQ      $0x20, R12
+	DECQ      R13
+	JMP       rest_b
+
+rest_b_end:
+	VMOVUPS Y0, (AX)
+	VMOVUPS Y1, 32(AX)
+	MOVQ    R10, SI
+	MOVQ    R11, DI
+	MOVQ    R12, R8
+	ADDQ    $0x40, AX
+	ADDQ    $0x08, DX
+	SUBQ    $0x02, CX
+	JMP     pair
+
+last:
+	TESTQ   CX, CX
+	JLE     done
+	MOVLQSX (DX), CX
+	MOVLQSX 4(DX), R9
+	SUBQ    CX, R9
+	VXORPS  Y0, Y0, Y0
+
+rest:
+	TESTQ     R9, R9
+	JLE       rest_end
+	MOVLQSX   (SI), CX
 	VPMOVZXBD (DI), Y1
-	VPERMPS   (BX)(R10*4), Y1, Y1
+	VPERMPS   (BX)(CX*4), Y1, Y1
 	VMULPS    (R8), Y1, Y1
 	VADDPS    Y1, Y0, Y0
 	ADDQ      $0x04, SI
 	ADDQ      $0x08, DI
 	ADDQ      $0x20, R8
-	DECL      R9
-	JMP       slots
+	DECQ      R9
+	JMP       rest
 
-sum:
+rest_end:
 	VMOVUPS Y0, (AX)
-	ADDQ    $0x20, AX
-	ADDQ    $0x04, DX
-	DECQ    CX
-	JMP     block
 
 done:
 	VZEROUPPER
