@@ -51,16 +51,19 @@ type Provenance struct {
 
 // Solver records how the reconstruction ended.
 type Solver struct {
-	Method       string  `json:"method"`
-	Status       string  `json:"status"`
-	Iterations   int     `json:"iterations"`
-	Lambda       float64 `json:"lambda"`
-	Alpha        float64 `json:"alpha"`
-	Misfit       float64 `json:"misfit_streak"`
-	MisfitOther  float64 `json:"misfit_reference"`
-	Note         string  `json:"note,omitempty"`
-	GuardFrames  int     `json:"guard_frames"`
-	OutsideShare float64 `json:"outside_share"`
+	Method     string  `json:"method"`
+	Status     string  `json:"status"`
+	Iterations int     `json:"iterations"`
+	Lambda     float64 `json:"lambda"`
+	Alpha      float64 `json:"alpha"`
+	// Spacing of the spline knots along time, y and x, in frames and cube
+	// pixels; 0 where the cube is the voxels' own.
+	Spacing      [3]float64 `json:"spacing"`
+	Misfit       float64    `json:"misfit_streak"`
+	MisfitOther  float64    `json:"misfit_reference"`
+	Note         string     `json:"note,omitempty"`
+	GuardFrames  int        `json:"guard_frames"`
+	OutsideShare float64    `json:"outside_share"`
 }
 
 func newProvenance(j *Job) Provenance {

@@ -172,8 +172,12 @@ func (s *shot) cut() {
 func (s *shot) measure(context.Context) (string, error) {
 	c, outside := s.station.cube(s.solved.X)
 	r := s.solved
-	s.prov.Solver = Solver{Method: "preconditioned primal-dual, total variation, discrepancy principle",
-		Status: string(r.Status), Iterations: r.Iterations, Lambda: r.Lambda, Alpha: r.Alpha,
+	method := "non-negative cubic B-splines, total variation; spacing and weight by hold-out; preconditioned primal-dual"
+	if r.Spacing == ([3]float64{}) {
+		method = "non-negative voxels, total variation; weight by discrepancy; preconditioned primal-dual"
+	}
+	s.prov.Solver = Solver{Method: method,
+		Status: string(r.Status), Iterations: r.Iterations, Lambda: r.Lambda, Alpha: r.Alpha, Spacing: r.Spacing,
 		Misfit: r.Chi2Streak, MisfitOther: r.Chi2Reference, Note: strings.Join(r.Notes, "; "),
 		GuardFrames: s.station.lead, OutsideShare: outside}
 	light, sigma := s.station.expected(s.refFrame)

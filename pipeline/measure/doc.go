@@ -21,8 +21,9 @@
 // one, the centroid is taken over the pixels whose 3×3 mean exceeds a set
 // share of the frame's largest 3×3 mean; frames whose patch touches the border
 // of the window are left out, because a clipped patch has a displaced centroid.
-// The velocity is the slope of a straight line fitted to the centroids by
-// weighted least squares, weights being the light; its deviation comes from
+// The velocity is the slope of a straight line fitted by weighted least squares,
+// weights being the light, to the centroids of the frames that carry at least
+// half the light of the brightest one (all, where those are fewer than three); its deviation comes from
 // the scatter about the line with n−2 degrees of freedom. Where the track bends,
 // as at a wall, the line is that of the stretch of consecutive frames that
 // carries most light and scatters by no more than half a pixel rms.

@@ -3,17 +3,23 @@ package measure
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"unsheard/pipeline/cube"
 )
 
 const (
 	// frameShare is the least light of a frame, against the brightest one,
-	// for its centroid to count.
+	// for its centroid to be in the track.
 	frameShare = 0.1
+	// fitShare is the same for the speed. What a cube shows in dim frames is
+	// drawn towards where the light is in the bright ones: with all frames
+	// down to a tenth, the speed of simulated packets came out 2 to 4 % low,
+	// with those above half the light 0 to 2 %.
+	fitShare = 0.5
 	// patchShare is the least 3×3 mean of a pixel, against the frame's
 	// largest, to belong to the patch whose centroid is taken.
-	patchShare = 0.2
+	patchShare = 0.4
 	// borderShare is the most light a patch may have on the window's border
 	// before the frame is left out as clipped.
 	borderShare = 0.02
@@ -25,16 +31,17 @@ func (in *Input) motion(r *Report) {
 		return
 	}
 	r.Track = tr
-	if len(tr.Time) < 3 {
+	if len(tr.Time) < stretch {
 		r.note("fewer than three frames with an unclipped patch of light: no speed")
 		return
 	}
-	a, b := straight(tr)
-	if b-a < len(tr.Time) {
-		r.note(fmt.Sprintf("the track bends or jumps: speed is that of its straight stretch from %.4g to %.4g ps", tr.Time[a], tr.Time[b-1]))
+	f := tr.bright()
+	a, b := straight(f)
+	if b-a < len(f.Time) {
+		r.note(fmt.Sprintf("the track bends or jumps: speed is that of its straight stretch from %.4g to %.4g ps", f.Time[a], f.Time[b-1]))
 	}
-	vx, sx := slope(tr.Time[a:b], tr.X[a:b], tr.Light[a:b])
-	vy, sy := slope(tr.Time[a:b], tr.Y[a:b], tr.Light[a:b])
+	vx, sx := slope(f.Time[a:b], f.X[a:b], f.Light[a:b])
+	vy, sy := slope(f.Time[a:b], f.Y[a:b], f.Light[a:b])
 	v := math.Hypot(vx, vy)
 	s := math.Max(sx, sy)
 	if v > 0 {
@@ -96,6 +103,24 @@ func scatter(t, v, g []float64) float64 {
 		sum += w
 	}
 	return math.Sqrt(chi / sum)
+}
+
+// bright returns the part of a track that the speed is fitted to: frames with
+// at least fitShare of the most light, or all if those are too few.
+func (tr *Track) bright() *Track {
+	top := slices.Max(tr.Light)
+	out := &Track{}
+	for k, l := range tr.Light {
+		if l >= fitShare*top {
+			out.Time = append(out.Time, tr.Time[k])
+			out.X, out.Y = append(out.X, tr.X[k]), append(out.Y, tr.Y[k])
+			out.Light = append(out.Light, l)
+		}
+	}
+	if len(out.Time) < stretch {
+		return tr
+	}
+	return out
 }
 
 // track returns the centroids of all frames with enough light, or nil if there
