@@ -53,6 +53,7 @@ type band struct {
 	ring          [2][]float32
 	streak        []float32 // (rows + (t−1)·step)·w
 	sum           []float32 // rows·w
+	scratch       []float32 // two rows
 	top, bottom   []float32 // extrapolated first and last rows, t·w
 	dx            float64   // see plane
 	total, square float64
@@ -133,6 +134,7 @@ func (e *engine) newBand(y0, y1 int) *band {
 		*v = make([]float32, e.t*n)
 	}
 	b.ring = [2][]float32{make([]float32, n), make([]float32, n)}
+	b.scratch = make([]float32, 2*e.w)
 	b.top, b.bottom = make([]float32, e.t*e.w), make([]float32, e.t*e.w)
 	return b
 }
@@ -264,7 +266,7 @@ func (e *engine) sweep(j int, count bool) {
 	clear(b.sum)
 	code := e.m.Geometry().Code
 	a := plane{rows: rows, w: e.w, own: e.own[b.y0*e.w:][:n], code: code[b.y0*e.w:][:n], back: e.backR[b.y0*e.w:][:n],
-		castStride: e.cols, sum: b.sum, alpha: e.alpha, ball: e.ball, lanes: e.lanes,
+		castStride: e.cols, sum: b.sum, alpha: e.alpha, ball: e.ball, lanes: e.lanes, grad: b.scratch[:e.w], curve: b.scratch[e.w:],
 		last: b.y1 == e.h, count: count, zero: e.zero, first: true}
 	for k := range e.t {
 		cut := func(v []float32) []float32 { return v[k*n : (k+1)*n] }

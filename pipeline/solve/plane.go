@@ -1,10 +1,6 @@
 package solve
 
-import (
-	"math"
-
-	"unsheard/pipeline/solve/row"
-)
+import "unsheard/pipeline/solve/row"
 
 // tiny is the magnitude under which the cube and the duals are set to 0.
 // Relaxation shrinks a dark voxel by a constant factor per iteration, and the
@@ -14,9 +10,6 @@ const tiny = 0x1p-60
 
 // step is the relaxed step of both loops.
 var step = row.Step{Rho: relax, Tiny: tiny}
-
-// tinyBits is tiny without its sign bit, shifted up by one.
-const tinyBits = (127 - 60) << 24
 
 // plane is one call of the kernel: the primal step of plane k and the dual
 // step of plane k−1, for the rows of one band. All slices are rows·w long
@@ -38,6 +31,7 @@ type plane struct {
 	sum           []float32 // reference plane of the band, added to
 	alpha         float32   // weight of ∂t
 	ball          row.Ball  // dual step
+	grad, curve   []float32 // scratch rows (w)
 	lanes         row.Lanes
 	first         bool    // k = 0: no plane k−1 to step
 	last          bool    // the band's last row is the cube's last row
@@ -73,8 +67,10 @@ func (a *plane) step() {
 		if !a.first {
 			rBack = a.rr[lo:hi]
 		}
-		primal(a.x[lo:hi], a.now[lo:hi], a.code[lo:hi], a.own[lo:hi], a.cast[y*a.castStride:][:w], a.col[y*a.castStride:][:w], a.back[lo:hi],
-			a.p[lo:hi], a.q[lo:hi], qUp, a.r[lo:hi], rBack, a.streak[lo:hi], a.sum[lo:hi], a.alpha)
+		x, now, code := a.x[lo:hi], a.now[lo:hi], a.code[lo:hi]
+		a.lanes.Slope(a.grad, a.curve, code, a.cast[y*a.castStride:][:w], a.back[lo:hi], a.col[y*a.castStride:][:w], a.own[lo:hi])
+		a.lanes.Diverge(a.grad, a.p[lo:hi], a.q[lo:hi], qUp, a.r[lo:hi], rBack, a.alpha)
+		a.lanes.Descend(x, now, a.grad, a.curve, code, a.streak[lo:hi], a.sum[lo:hi], step)
 		if a.count {
 			d, s, s2 := change(a.now[lo:hi], a.x[lo:hi])
 			a.dx += d
@@ -106,41 +102,6 @@ func (a *plane) dualRow(y int, next []float32) {
 		return
 	}
 	a.lanes.Dual(a.pp[lo:hi], a.qq[lo:hi], a.rr[lo:hi], b, down, next, a.ball, step)
-}
-
-// primal is the first half of step for one row. Products are rounded before
-// they are added, so that every machine gives the same bits.
-func primal(x, now, code, own, cast, col, back, p, q, qUp, r, rBack, streak, sum []float32, alpha float32) {
-	n := len(x)
-	now, code, own, cast, col, back = now[:n], code[:n], own[:n], cast[:n], col[:n], back[:n]
-	p, q, qUp, r, rBack = p[:n], q[:n], qUp[:n], r[:n], rBack[:n]
-	streak, sum = streak[:n], sum[:n]
-	var left float32
-	for i := range x {
-		c := code[i]
-		g := float32(c*cast[i]) + back[i]
-		g -= p[i] - left
-		left = p[i]
-		g -= q[i] - qUp[i]
-		g -= float32(alpha * (r[i] - rBack[i]))
-		old := x[i]
-		v := old - g/(float32(c*col[i])+own[i])
-		if !(v > tiny) {
-			v = 0
-		}
-		d := v - old
-		e := v + d
-		x[i], now[i] = flush(old+float32(relax*d)), e
-		streak[i] += float32(c * e)
-		sum[i] += e
-	}
-}
-
-func flush(v float32) float32 {
-	if math.Float32bits(v)<<1 < tinyBits {
-		return 0
-	}
-	return v
 }
 
 // change returns Σ|v − x_old|, Σ v and Σ v² of a row of unrelaxed values v,

@@ -40,3 +40,9 @@ func dualRow(p, q, r, b, down, next *float32, n int, sigma, sigmaT, lambda, limi
 func fitRow(dual, now, bar, data, vari, sigma, inv *float32, n int, scale, rho, tiny float32) {
 	panic(unreached)
 }
+
+func slopeRow(grad, curve, code, cast, back, col, own *float32, n int) { panic(unreached) }
+
+func descendRow(x, bar, grad, curve, code, streak, sum *float32, n int, rho, tiny float32) {
+	panic(unreached)
+}

@@ -63,3 +63,13 @@ func dualRow(p *float32, q *float32, r *float32, b *float32, down *float32, next
 //
 //go:noescape
 func fitRow(dual *float32, now *float32, bar *float32, data *float32, vari *float32, sigma *float32, inv *float32, n int, scale float32, rho float32, tiny float32)
+
+// slopeRow is Slope for n voxels.
+//
+//go:noescape
+func slopeRow(grad *float32, curve *float32, code *float32, cast *float32, back *float32, col *float32, own *float32, n int)
+
+// descendRow is Descend for n voxels.
+//
+//go:noescape
+func descendRow(x *float32, bar *float32, grad *float32, curve *float32, code *float32, streak *float32, sum *float32, n int, rho float32, tiny float32)

@@ -1111,3 +1111,141 @@ tail:
 done:
 	VZEROUPPER
 	RET
+
+// func slopeRow(grad *float32, curve *float32, code *float32, cast *float32, back *float32, col *float32, own *float32, n int)
+// Requires: AVX
+TEXT ·slopeRow(SB), NOSPLIT, $0-64
+	MOVQ grad+0(FP), AX
+	MOVQ curve+8(FP), CX
+	MOVQ code+16(FP), DX
+	MOVQ cast+24(FP), BX
+	MOVQ back+32(FP), SI
+	MOVQ col+40(FP), DI
+	MOVQ own+48(FP), R8
+	MOVQ n+56(FP), R9
+	XORQ R10, R10
+
+whole:
+	CMPQ    R9, $0x08
+	JL      tail
+	VMOVUPS (DX)(R10*1), Y0
+	VMOVUPS (BX)(R10*1), Y1
+	VMOVUPS (SI)(R10*1), Y2
+	VMULPS  Y0, Y1, Y1
+	VADDPS  Y2, Y1, Y1
+	VMOVUPS Y1, (AX)(R10*1)
+	VMOVUPS (DI)(R10*1), Y1
+	VMOVUPS (R8)(R10*1), Y2
+	VMULPS  Y0, Y1, Y1
+	VADDPS  Y2, Y1, Y1
+	VMOVUPS Y1, (CX)(R10*1)
+	ADDQ    $0x20, R10
+	SUBQ    $0x08, R9
+	JMP     whole
+
+tail:
+	TESTQ      R9, R9
+	JLE        done
+	MOVQ       $0x00000008, R11
+	SUBQ       R9, R11
+	LEAQ       masks<>+0(SB), R9
+	VMOVUPS    (R9)(R11*4), Y0
+	VMASKMOVPS (DX)(R10*1), Y0, Y1
+	VMASKMOVPS (BX)(R10*1), Y0, Y2
+	VMASKMOVPS (SI)(R10*1), Y0, Y3
+	VMULPS     Y1, Y2, Y2
+	VADDPS     Y3, Y2, Y2
+	VMASKMOVPS Y2, Y0, (AX)(R10*1)
+	VMASKMOVPS (DI)(R10*1), Y0, Y2
+	VMASKMOVPS (R8)(R10*1), Y0, Y3
+	VMULPS     Y1, Y2, Y2
+	VADDPS     Y3, Y2, Y2
+	VMASKMOVPS Y2, Y0, (CX)(R10*1)
+
+done:
+	VZEROUPPER
+	RET
+
+// func descendRow(x *float32, bar *float32, grad *float32, curve *float32, code *float32, streak *float32, sum *float32, n int, rho float32, tiny float32)
+// Requires: AVX, AVX2
+TEXT ·descendRow(SB), NOSPLIT, $0-72
+	MOVQ         x+0(FP), AX
+	MOVQ         bar+8(FP), CX
+	MOVQ         grad+16(FP), DX
+	MOVQ         curve+24(FP), BX
+	MOVQ         code+32(FP), SI
+	MOVQ         streak+40(FP), DI
+	MOVQ         sum+48(FP), R8
+	MOVQ         n+56(FP), R9
+	VBROADCASTSS rho+64(FP), Y0
+	VBROADCASTSS tiny+68(FP), Y1
+	VPCMPEQD     Y2, Y2, Y2
+	VPSRLD       $0x01, Y2, Y2
+	XORQ         R10, R10
+
+whole:
+	CMPQ    R9, $0x08
+	JL      tail
+	VMOVUPS (AX)(R10*1), Y3
+	VMOVUPS (DX)(R10*1), Y4
+	VMOVUPS (BX)(R10*1), Y5
+	VDIVPS  Y5, Y4, Y4
+	VSUBPS  Y4, Y3, Y4
+	VCMPPS  $0x1e, Y1, Y4, Y5
+	VANDPS  Y5, Y4, Y4
+	VSUBPS  Y3, Y4, Y5
+	VADDPS  Y5, Y4, Y4
+	VMOVUPS Y4, (CX)(R10*1)
+	VMULPS  Y0, Y5, Y5
+	VADDPS  Y5, Y3, Y3
+	VANDPS  Y3, Y2, Y5
+	VCMPPS  $0x15, Y1, Y5, Y5
+	VANDPS  Y3, Y5, Y3
+	VMOVUPS Y3, (AX)(R10*1)
+	VMOVUPS (SI)(R10*1), Y3
+	VMOVUPS (R8)(R10*1), Y5
+	VMULPS  Y4, Y3, Y3
+	VADDPS  Y4, Y5, Y5
+	VMOVUPS Y5, (R8)(R10*1)
+	VMOVUPS (DI)(R10*1), Y4
+	VADDPS  Y3, Y4, Y4
+	VMOVUPS Y4, (DI)(R10*1)
+	ADDQ    $0x20, R10
+	SUBQ    $0x08, R9
+	JMP     whole
+
+tail:
+	TESTQ      R9, R9
+	JLE        done
+	MOVQ       $0x00000008, R11
+	SUBQ       R9, R11
+	LEAQ       masks<>+0(SB), R9
+	VMOVUPS    (R9)(R11*4), Y3
+	VMASKMOVPS (AX)(R10*1), Y3, Y4
+	VMASKMOVPS (DX)(R10*1), Y3, Y5
+	VMASKMOVPS (BX)(R10*1), Y3, Y6
+	VDIVPS     Y6, Y5, Y5
+	VSUBPS     Y5, Y4, Y5
+	VCMPPS     $0x1e, Y1, Y5, Y6
+	VANDPS     Y6, Y5, Y5
+	VSUBPS     Y4, Y5, Y6
+	VADDPS     Y6, Y5, Y5
+	VMASKMOVPS Y5, Y3, (CX)(R10*1)
+	VMULPS     Y0, Y6, Y6
+	VADDPS     Y6, Y4, Y4
+	VANDPS     Y4, Y2, Y0
+	VCMPPS     $0x15, Y1, Y0, Y0
+	VANDPS     Y4, Y0, Y4
+	VMASKMOVPS Y4, Y3, (AX)(R10*1)
+	VMASKMOVPS (SI)(R10*1), Y3, Y0
+	VMASKMOVPS (R8)(R10*1), Y3, Y1
+	VMULPS     Y5, Y0, Y0
+	VADDPS     Y5, Y1, Y1
+	VMASKMOVPS Y1, Y3, (R8)(R10*1)
+	VMASKMOVPS (DI)(R10*1), Y3, Y1
+	VADDPS     Y0, Y1, Y1
+	VMASKMOVPS Y1, Y3, (DI)(R10*1)
+
+done:
+	VZEROUPPER
+	RET

@@ -195,6 +195,8 @@ func TestStepsSameBits(t *testing.T) {
 			if n > 0 {
 				l.Dual(c[1], c[2], c[3], c[0], c[6], c[7], Ball{Sigma: .3, Alpha: .15, Lambda: .7}, testStep)
 			}
+			l.Slope(c[4], c[5], c[6], c[0], c[1], c[2], c[3])
+			l.Descend(c[0], c[1], c[4], c[5], c[6], c[7], c[2], testStep)
 			l.Fit(Data{Dual: c[0], Now: c[1], Bar: c[2], Data: c[3], Vari: c[4], Sigma: c[5], Inv: c[6]}, 1.3, testStep)
 		}
 		run(l, got)

@@ -42,6 +42,8 @@ func main() {
 	diverge()
 	dual()
 	fit()
+	slope()
+	descend()
 	Generate()
 }
 

@@ -185,3 +185,52 @@ func fit() {
 		a.store(d, a.row(dual))
 	})
 }
+
+func slope() {
+	TEXT("slopeRow", NOSPLIT, "func(grad, curve, code, cast, back, col, own *float32, n int)")
+	Pragma("noescape")
+	Doc("slopeRow is Slope for n voxels.")
+	grad, curve, code := pointer("grad"), pointer("curve"), pointer("code")
+	cast, back, col, own := pointer("cast"), pointer("back"), pointer("col"), pointer("own")
+	n := pointer("n")
+	each(n, func(a access) {
+		c := a.read(code)
+		for _, t := range [][3]reg.GPVirtual{{grad, cast, back}, {curve, col, own}} {
+			v, b := a.read(t[1]), a.read(t[2])
+			VMULPS(c, v, v)
+			VADDPS(b, v, v)
+			a.store(v, a.row(t[0]))
+		}
+	})
+}
+
+func descend() {
+	TEXT("descendRow", NOSPLIT, "func(x, bar, grad, curve, code, streak, sum *float32, n int, rho, tiny float32)")
+	Pragma("noescape")
+	Doc("descendRow is Descend for n voxels.")
+	x, bar, grad, curve := pointer("x"), pointer("bar"), pointer("grad"), pointer("curve")
+	code, streak, sum := pointer("code"), pointer("streak"), pointer("sum")
+	n := pointer("n")
+	rho, tiny, magnitude := every("rho"), every("tiny"), magnitudes()
+	each(n, func(a access) {
+		old, v, t, keep := a.read(x), a.read(grad), a.read(curve), YMM()
+		VDIVPS(t, v, v)
+		VSUBPS(v, old, v)
+		VCMPPS(greater, tiny, v, keep)
+		VANDPS(keep, v, v)
+		VSUBPS(old, v, t) // v − x
+		VADDPS(t, v, v)
+		a.store(v, a.row(bar))
+		VMULPS(rho, t, t)
+		VADDPS(t, old, old)
+		flush(old, tiny, magnitude)
+		a.store(old, a.row(x))
+		c, s := a.read(code), a.read(sum)
+		VMULPS(v, c, c)
+		VADDPS(v, s, s)
+		a.store(s, a.row(sum))
+		e := a.read(streak)
+		VADDPS(c, e, e)
+		a.store(e, a.row(streak))
+	})
+}
