@@ -607,7 +607,7 @@ done:
 	RET
 
 // func mulBlocks(dst *float32, blocks int, slot *int32, src *float32, base *int32, pick *uint8, w *float32)
-// Requires: AVX, AVX2
+// Requires: AVX, AVX2, MMX+
 TEXT ·mulBlocks(SB), NOSPLIT, $0-56
 	MOVQ dst+0(FP), AX
 	MOVQ blocks+8(FP), CX
@@ -635,58 +635,62 @@ pair:
 	ADDQ    R8, R12
 
 both:
-	TESTQ     R9, R9
-	JLE       rest_b
-	TESTQ     R13, R13
-	JLE       rest_a
-	MOVLQSX   (SI), R14
-	VPMOVZXBD (DI), Y2
-	VPERMPS   (BX)(R14*4), Y2, Y2
-	VMULPS    (R8), Y2, Y2
-	VADDPS    Y2, Y0, Y0
-	ADDQ      $0x04, SI
-	ADDQ      $0x08, DI
-	ADDQ      $0x20, R8
-	DECQ      R9
-	MOVLQSX   (R10), R14
-	VPMOVZXBD (R11), Y2
-	VPERMPS   (BX)(R14*4), Y2, Y2
-	VMULPS    (R12), Y2, Y2
-	VADDPS    Y2, Y1, Y1
-	ADDQ      $0x04, R10
-	ADDQ      $0x08, R11
-	ADDQ      $0x20, R12
-	DECQ      R13
-	JMP       both
+	TESTQ      R9, R9
+	JLE        rest_b
+	TESTQ      R13, R13
+	JLE        rest_a
+	MOVLQSX    (SI), R14
+	PREFETCHT0 2048(R8)
+	VPMOVZXBD  (DI), Y2
+	VPERMPS    (BX)(R14*4), Y2, Y2
+	VMULPS     (R8), Y2, Y2
+	VADDPS     Y2, Y0, Y0
+	ADDQ       $0x04, SI
+	ADDQ       $0x08, DI
+	ADDQ       $0x20, R8
+	DECQ       R9
+	MOVLQSX    (R10), R14
+	PREFETCHT0 2048(R12)
+	VPMOVZXBD  (R11), Y2
+	VPERMPS    (BX)(R14*4), Y2, Y2
+	VMULPS     (R12), Y2, Y2
+	VADDPS     Y2, Y1, Y1
+	ADDQ       $0x04, R10
+	ADDQ       $0x08, R11
+	ADDQ       $0x20, R12
+	DECQ       R13
+	JMP        both
 
 rest_a:
-	TESTQ     R9, R9
-	JLE       rest_a_end
-	MOVLQSX   (SI), R14
-	VPMOVZXBD (DI), Y2
-	VPERMPS   (BX)(R14*4), Y2, Y2
-	VMULPS    (R8), Y2, Y2
-	VADDPS    Y2, Y0, Y0
-	ADDQ      $0x04, SI
-	ADDQ      $0x08, DI
-	ADDQ      $0x20, R8
-	DECQ      R9
-	JMP       rest_a
+	TESTQ      R9, R9
+	JLE        rest_a_end
+	MOVLQSX    (SI), R14
+	PREFETCHT0 2048(R8)
+	VPMOVZXBD  (DI), Y2
+	VPERMPS    (BX)(R14*4), Y2, Y2
+	VMULPS     (R8), Y2, Y2
+	VADDPS     Y2, Y0, Y0
+	ADDQ       $0x04, SI
+	ADDQ       $0x08, DI
+	ADDQ       $0x20, R8
+	DECQ       R9
+	JMP        rest_a
 
 rest_a_end:
 rest_b:
-	TESTQ     R13, R13
-	JLE       rest_b_end
-	MOVLQSX   (R10), SI
-	VPMOVZXBD (R11), Y2
-	VPERMPS   (BX)(SI*4), Y2, Y2
-	VMULPS    (R12), Y2, Y2
-	VADDPS    Y2, Y1, Y1
-	ADDQ      $0x04, R10
-	ADDQ      $0x08, R11
-	ADDQ      $0x20, R12
-	DECQ      R13
-	JMP       rest_b
+	TESTQ      R13, R13
+	JLE        rest_b_end
+	MOVLQSX    (R10), SI
+	PREFETCHT0 2048(R12)
+	VPMOVZXBD  (R11), Y2
+	VPERMPS    (BX)(SI*4), Y2, Y2
+	VMULPS     (R12), Y2, Y2
+	VADDPS     Y2, Y1, Y1
+	ADDQ       $0x04, R10
+	ADDQ       $0x08, R11
+	ADDQ       $0x20, R12
+	DECQ       R13
+	JMP        rest_b
 
 rest_b_end:
 	VMOVUPS Y0, (AX)
@@ -708,18 +712,19 @@ last:
 	VXORPS  Y0, Y0, Y0
 
 rest:
-	TESTQ     R9, R9
-	JLE       rest_end
-	MOVLQSX   (SI), CX
-	VPMOVZXBD (DI), Y1
-	VPERMPS   (BX)(CX*4), Y1, Y1
-	VMULPS    (R8), Y1, Y1
-	VADDPS    Y1, Y0, Y0
-	ADDQ      $0x04, SI
-	ADDQ      $0x08, DI
-	ADDQ      $0x20, R8
-	DECQ      R9
-	JMP       rest
+	TESTQ      R9, R9
+	JLE        rest_end
+	MOVLQSX    (SI), CX
+	PREFETCHT0 2048(R8)
+	VPMOVZXBD  (DI), Y1
+	VPERMPS    (BX)(CX*4), Y1, Y1
+	VMULPS     (R8), Y1, Y1
+	VADDPS     Y1, Y0, Y0
+	ADDQ       $0x04, SI
+	ADDQ       $0x08, DI
+	ADDQ       $0x20, R8
+	DECQ       R9
+	JMP        rest
 
 rest_end:
 	VMOVUPS Y0, (AX)

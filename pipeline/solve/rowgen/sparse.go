@@ -6,6 +6,10 @@ import (
 	"github.com/mmcloughlin/avo/reg"
 )
 
+// fetch is how far the weights are fetched before they are needed, in bytes:
+// a large view is read from memory, once per product.
+const fetch = 2048
+
 // sparse reads the 8 columns in a slot's reach at once and gives every row its
 // own by a permutation. Two blocks go side by side as long as both have slots,
 // since the sums of one wait for each other.
@@ -75,6 +79,7 @@ func (s slots) count(slot reg.Register, disp int) {
 func (s slots) step(src reg.Register) {
 	idx, v, from := YMM(), YMM(), GP64()
 	MOVLQSX(Mem{Base: s.base}, from)
+	PREFETCHT0(Mem{Base: s.w, Disp: fetch})
 	VPMOVZXBD(Mem{Base: s.pick}, idx)
 	VPERMPS(Mem{Base: src, Index: from, Scale: 4}, idx, v)
 	VMULPS(Mem{Base: s.w}, v, v)
