@@ -57,21 +57,21 @@ func (o Options) fill() Options {
 func (o Options) Validate() error {
 	var errs []error
 	if o.Path == "" {
-		errs = append(errs, errors.New("Path is empty: name the ledger's file"))
+		errs = append(errs, errors.New("option Path is empty: name the ledger's file"))
 	}
 	if o.MaxAttempts < 0 {
-		errs = append(errs, fmt.Errorf("MaxAttempts is %d: it must be at least 1 (0: 4)", o.MaxAttempts))
+		errs = append(errs, fmt.Errorf("option MaxAttempts is %d: it must be at least 1 (0: 4)", o.MaxAttempts))
 	}
 	for _, p := range o.Passes {
 		if p != Quick && p != Full && p != Spread {
-			errs = append(errs, fmt.Errorf("Passes has %q: it must be quick, full or spread", p))
+			errs = append(errs, fmt.Errorf("option Passes has %q: it must be quick, full or spread", p))
 		}
 	}
 	if len(o.Passes) > 0 && !slices.Contains(o.Passes, Full) && !slices.Contains(o.Passes, Quick) {
-		errs = append(errs, errors.New("Passes has neither quick nor full: one of them must finish a shot"))
+		errs = append(errs, errors.New("option Passes has neither quick nor full: one of them must finish a shot"))
 	}
 	if slices.Contains(o.Passes, Spread) && !slices.Contains(o.Passes, Full) {
-		errs = append(errs, errors.New("Passes has spread without full: spread follows the full pass"))
+		errs = append(errs, errors.New("option Passes has spread without full: spread follows the full pass"))
 	}
 	return errors.Join(errs...)
 }

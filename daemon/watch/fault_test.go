@@ -244,7 +244,7 @@ func TestOptions(t *testing.T) {
 	if err == nil {
 		t.Fatal("accepted")
 	}
-	for _, want := range []string{"Folder is empty", "Quiet = -1ns is negative", "Depth = -2 is negative"} {
+	for _, want := range []string{"folder is empty", "Quiet = -1ns is negative", "Depth = -2 is negative"} {
 		if !strings.Contains(err.Error(), want) {
 			t.Errorf("%v does not say %q", err, want)
 		}

@@ -90,15 +90,15 @@ func (o *Options) fill() {
 func (o *Options) Validate() error {
 	var errs []error
 	if o.Folder == "" {
-		errs = append(errs, errors.New("Folder is empty"))
+		errs = append(errs, errors.New("folder is empty"))
 	}
 	for name, d := range map[string]time.Duration{"Quiet": o.Quiet, "Longest": o.Longest, "Rescan": o.Rescan, "Stuck": o.Stuck} {
 		if d < 0 {
-			errs = append(errs, fmt.Errorf("%s = %v is negative", name, d))
+			errs = append(errs, fmt.Errorf("option %s = %v is negative", name, d))
 		}
 	}
 	if o.Depth < 0 {
-		errs = append(errs, fmt.Errorf("Depth = %d is negative", o.Depth))
+		errs = append(errs, fmt.Errorf("option Depth = %d is negative", o.Depth))
 	}
 	return errors.Join(errs...)
 }

@@ -59,14 +59,6 @@ const maxRank = 32
 // maxDepth bounds the nesting of groups, written or read.
 const maxDepth = 32
 
-func (d *Dataset) elements() int64 {
-	n := int64(1)
-	for _, s := range d.Shape {
-		n *= int64(s)
-	}
-	return n
-}
-
 // normal checks the dataset and fills a nil Shape.
 func (d *Dataset) normal() error {
 	n := -1

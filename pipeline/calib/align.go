@@ -72,10 +72,9 @@ func mul3(a, b [9]float64) (c [9]float64) {
 
 // sample is the model at one pixel.
 type sample struct {
-	s, r   float64 // streak, reference · D⁻³
-	d      [8]float64
-	tile   int
-	inside bool
+	s, r float64 // streak, reference · D⁻³
+	d    [8]float64
+	tile int
 }
 
 // tiles is how many parts a side is cut into for the uncertainty.

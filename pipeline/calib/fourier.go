@@ -63,10 +63,6 @@ func fastLength(n int) int {
 // covariance is a symmetric 2 × 2 matrix, px².
 type covariance struct{ xx, xy, yy float64 }
 
-func (c covariance) add(d covariance) covariance {
-	return covariance{c.xx + d.xx, c.xy + d.xy, c.yy + d.yy}
-}
-
 // through returns J c Jᵀ for J = [[a b] [c d]].
 func (c covariance) through(j [4]float64) covariance {
 	a, b, d, e := j[0], j[1], j[2], j[3]
@@ -75,10 +71,6 @@ func (c covariance) through(j [4]float64) covariance {
 		a*d*c.xx + (a*e+b*d)*c.xy + b*e*c.yy,
 		d*d*c.xx + 2*d*e*c.xy + e*e*c.yy,
 	}
-}
-
-func (c covariance) reach() int {
-	return int(math.Ceil(4 * math.Sqrt(max(c.xx, c.yy, 0))))
 }
 
 // spectrum is an image's transform, kept to blur it by many covariances.

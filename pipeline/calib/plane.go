@@ -5,9 +5,6 @@ import (
 	"slices"
 )
 
-// errShape is the panic of a kernel given arrays of unequal size.
-const errShape = "calib: array sizes differ"
-
 // plane is a row-major image in float64, row 0 at the top.
 type plane struct {
 	w, h int

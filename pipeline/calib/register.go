@@ -44,7 +44,6 @@ type registrar struct {
 	streak  covariance // of the streak arm, pixel included
 	ws, wr  *spectrum  // transforms
 	noise   [2]float64 // mean variance of the two images
-	rok     []bool     // good reference pixels
 	refBlur [2]float64 // σ of the reference arm, px
 }
 

@@ -145,20 +145,3 @@ func (a *Arm) correct(s *stack) image {
 	}
 	return im
 }
-
-// saturated returns the part of the good pixels that reached saturation.
-func (a *Arm) saturated(s *stack) float64 {
-	if a.Saturation.Value <= 0 {
-		return 0
-	}
-	n, good := 0, 0
-	for i, v := range s.top {
-		if !a.Bad[i] {
-			good++
-			if v >= a.Saturation.Value {
-				n++
-			}
-		}
-	}
-	return float64(n) / float64(max(good, 1))
-}

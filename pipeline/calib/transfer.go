@@ -20,7 +20,6 @@ type Level struct {
 	mean  float64 // ADU, as recorded
 	part  float64 // relative standard deviation of Var, of Gaussian noise whose variance goes with the light
 	full  bool    // many pixels stand at the top
-	sum   []float64
 }
 
 // Transfer is the photon transfer of one arm: EMVA Standard 1288 Release 4.0
@@ -36,16 +35,14 @@ type Level struct {
 type Transfer struct {
 	Levels []Level
 
-	K, SigmaK       float64 // ADU per pe
-	DarkVar         float64 // ADU², quantisation included
-	SigmaDarkVar    float64 // ADU²
-	Saturation      float64 // ADU as recorded; 0 if not known
-	SaturationNote  string
-	Linearity       float64 // mean relative deviation; NaN if not known
-	LinearityMax    float64
-	Source          string // flat pairs or repeated frames
-	pixels          int
-	usedMean, usedN float64
+	K, SigmaK      float64 // ADU per pe
+	DarkVar        float64 // ADU², quantisation included
+	SigmaDarkVar   float64 // ADU²
+	Saturation     float64 // ADU as recorded; 0 if not known
+	SaturationNote string
+	Linearity      float64 // mean relative deviation; NaN if not known
+	LinearityMax   float64
+	Source         string // flat pairs or repeated frames
 }
 
 // Limits of the standard: the gain is fitted up to 70 % of saturation, the

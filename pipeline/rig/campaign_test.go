@@ -162,7 +162,7 @@ func TestOpticalFaults(t *testing.T) {
 	near(t, "dim reference", sum(y)/sum(b), 0.02, 1e-9)
 	near(t, "dim truth", tr.Rate(5)/truth.Rate(5), 0.02, 1e-9)
 
-	x, y, tr = look(Saturated)
+	x, _, tr = look(Saturated)
 	if top := slices.Max(x); top < 2*s.streak.full() {
 		t.Errorf("saturated: brightest pixel %g pe, the sensor holds %g", top, s.streak.full())
 	}
