@@ -56,7 +56,11 @@ true registration, as one more linear measurement with its best weight (0.25 to
 2): its better variant counts. Its seconds are those of its best run alone, up
 to its best iteration on one core; finding the setting took all the runs listed
 at the end. Neither peer models the blur of the frames, nor weighs pixels by
-their noise.
+their noise. A search proves no best: another one, from fewer places, found up to
+0.6 dB more for TwIST-TV (glow at 2000) and up to 0.1 dB more for the better of
+the two, and much less for GAP-TV on some shots. Seconds were taken
+on a shared machine with other work; with QUALITY=ours the peers' are those of
+their own run.
 
 `
 
