@@ -64,6 +64,11 @@ func TestFaultBadFiles(t *testing.T) {
 			t.Errorf("%s: its page does not say %q", sh.Name, b.why)
 		}
 	}
+	for _, sh := range shots {
+		if sh.State == queue.StateDone && (sh.ShownPass != queue.Full || readMetrics(t, sh.ResultDir).Pass != "full") {
+			t.Errorf("%s is done and shows the %s pass", sh.Name, sh.ShownPass)
+		}
+	}
 	if code, body := get(t, page+"readyz?verbose"); code != 200 {
 		t.Errorf("readyz = %d after bad files:\n%s", code, body)
 	}

@@ -88,6 +88,9 @@ func TestEndToEndNumbers(t *testing.T) {
 func compare(t *testing.T, dir string, p packet, umPerPx float64) {
 	t.Helper()
 	m := readMetrics(t, dir)
+	if m.Pass != "full" {
+		t.Errorf("%s holds the %s pass of a shot that is done", dir, m.Pass)
+	}
 	speed := math.Hypot(p.vx, p.vy)
 	for _, c := range []struct {
 		name       string

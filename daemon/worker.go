@@ -26,6 +26,7 @@ type worker struct {
 	folders  map[string]string // bundle folder by station
 	bundles  *bundles
 	budget   *budget
+	turns    *turns
 	child    child
 	logger   *zap.Logger
 	running  atomic.Int64
@@ -58,6 +59,12 @@ func (w *worker) Do(ctx context.Context, t queue.Task) (queue.Outcome, error) {
 	if t.Pass == queue.Quick {
 		coarse = max(2, w.work.Coarse)
 	}
+	// The turn comes before the memory: whoever holds memory waits for nobody.
+	endTurn, err := w.turns.take(ctx, t.ShotID)
+	if err != nil {
+		return queue.Outcome{}, err
+	}
+	defer endTurn()
 	need := pipeline.Bytes(b.T/coarse+1, b.H/coarse+1, b.W/coarse+1, b.Pixels)
 	release, err := w.budget.take(ctx, need)
 	if err != nil {

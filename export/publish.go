@@ -38,6 +38,9 @@ func publish(ctx context.Context, dir string, r *Result, from origin, o *Options
 		_ = o.disk.removeAll(s.partial)
 		return err
 	}
+	if !s.wanted(r) { // a finer result came while this one was written
+		return s.discard(ctx, s.ready)
+	}
 	return s.swap(ctx)
 }
 
