@@ -42,6 +42,9 @@ func Calibrate(ctx context.Context, series, out string) (*calib.Bundle, error) {
 	if err != nil {
 		return nil, err
 	}
+	if err := calib.Vacant(out); err != nil {
+		return nil, err // before the work, not after it
+	}
 	b, _, err := calib.Calibrate(ctx, s, calib.Options{})
 	if err != nil {
 		return nil, err

@@ -51,8 +51,11 @@ func Find(dir string, at time.Time) (string, error) {
 		}
 	}
 	if best == nil {
-		return "", fmt.Errorf("find bundle: none in %q is valid at %s%s: calibrate the station first",
-			dir, at.UTC().Format(time.RFC3339), listed(append(others, faults...)))
+		when := ""
+		if !at.IsZero() {
+			when = " valid at " + at.UTC().Format(time.RFC3339)
+		}
+		return "", fmt.Errorf("find bundle: none%s in %q%s: calibrate the station first", when, dir, listed(append(others, faults...)))
 	}
 	return found, nil
 }

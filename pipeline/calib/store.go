@@ -86,14 +86,14 @@ type armFile struct {
 var idLine = regexp.MustCompile(`(?m)^id = ['"][0-9a-f]*['"]\r?$`)
 
 // Save writes the bundle as a new folder dir: into a temporary folder beside
-// it, synced, then renamed. A bundle is never changed: an existing dir is
-// refused. It sets b.ID.
+// it, synced, then renamed. A bundle is never changed: a dir that holds
+// anything is refused, see [Vacant]. It sets b.ID.
 func (b *Bundle) Save(dir string) error {
 	if err := b.Validate(); err != nil {
 		return fmt.Errorf("save bundle %q: %w", dir, err)
 	}
-	if _, err := os.Lstat(dir); err == nil {
-		return fmt.Errorf("save bundle %q: it is already there and a bundle is never changed: choose another folder", dir)
+	if err := Vacant(dir); err != nil {
+		return err
 	}
 	if err := os.MkdirAll(filepath.Dir(dir), 0o755); err != nil {
 		return fmt.Errorf("save bundle %q: %w", dir, err)
@@ -109,10 +109,28 @@ func (b *Bundle) Save(dir string) error {
 	if err := os.Chmod(tmp, 0o755); err != nil {
 		return fmt.Errorf("save bundle %q: %w", dir, err)
 	}
+	// An empty folder in its place goes; one that has been filled meanwhile
+	// stays, and the rename fails.
+	if err := os.Remove(dir); err != nil && !errors.Is(err, fs.ErrNotExist) {
+		return fmt.Errorf("save bundle %q: %w", dir, err)
+	}
 	if err := os.Rename(tmp, dir); err != nil {
 		return fmt.Errorf("save bundle %q: %w", dir, err)
 	}
 	return nil
+}
+
+// Vacant returns an error if a bundle cannot be saved at dir because something
+// is there. An empty folder is nothing.
+func Vacant(dir string) error {
+	entries, err := os.ReadDir(dir)
+	switch {
+	case errors.Is(err, fs.ErrNotExist), err == nil && len(entries) == 0:
+		return nil
+	case err != nil:
+		return fmt.Errorf("save bundle: %w", err)
+	}
+	return fmt.Errorf("save bundle %q: it is already there and a bundle is never changed: choose another folder", dir)
 }
 
 func (b *Bundle) write(dir string) error {

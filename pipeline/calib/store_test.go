@@ -244,3 +244,24 @@ func FuzzLoad(f *testing.F) {
 		}
 	})
 }
+
+// TestVacant saves into an empty folder, as people make it, and refuses any
+// other.
+func TestVacant(t *testing.T) {
+	dir := t.TempDir()
+	if err := Vacant(dir); err != nil {
+		t.Errorf("an empty folder: %v", err)
+	}
+	if err := Vacant(filepath.Join(dir, "none")); err != nil {
+		t.Errorf("no folder: %v", err)
+	}
+	if err := os.WriteFile(filepath.Join(dir, "note"), nil, 0o644); err != nil {
+		t.Fatal(err)
+	}
+	if err := Vacant(dir); err == nil {
+		t.Error("a folder with a file counts as vacant")
+	}
+	if err := Vacant(filepath.Join(dir, "note")); err == nil {
+		t.Error("a file counts as vacant")
+	}
+}
