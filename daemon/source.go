@@ -2,21 +2,17 @@ package daemon
 
 import (
 	"context"
-	"encoding/json"
 	"errors"
 	"fmt"
-	"io"
 	"math"
 	"os"
 	"path/filepath"
-	"slices"
 	"strconv"
 	"strings"
 	"sync/atomic"
 	"time"
 
 	"unsheard/config"
-	"unsheard/daemon/watch"
 	"unsheard/daemon/web"
 	"unsheard/pipeline/measure"
 	"unsheard/queue"
@@ -52,7 +48,7 @@ func (s *source) Now(ctx context.Context) web.Snapshot {
 	for i, in := range s.intakes {
 		snap.Stations = append(snap.Stations, s.station(&s.config.Station[i], in))
 	}
-	snap.Attention, snap.More, err = s.attention(ctx, snap.Stations)
+	snap.Attention, snap.More, err = s.attention(ctx)
 	faults = append(faults, err)
 	snap.Recent, err = s.recent(ctx)
 	faults = append(faults, err)
@@ -141,24 +137,16 @@ func (s *source) station(c *config.Station, in *intake) web.Station {
 	return st
 }
 
-// attention lists what waits for a person: folders, bundles, then shots.
-func (s *source) attention(ctx context.Context, stations []web.Station) (out []web.Attention, more int, err error) {
-	for _, st := range stations {
-		for _, f := range st.Folders {
-			if f.Condition != string(watch.OK) {
-				out = append(out, web.Attention{Station: st.Name, Name: f.Path, State: f.Condition, Since: f.Since,
-					Text: fmt.Sprintf("the %s folder is %s: %s", f.Arm, f.Condition, f.Detail), Remedy: "check the share, its cable and its rights; it is taken up again by itself"})
-			}
-		}
-		if st.Warning != "" {
-			out = append(out, web.Attention{Station: st.Name, Name: "bundle", State: "bundle", Text: st.Warning,
-				Remedy: "make one with unsheard calibrate and put it into the station's bundle folder"})
-		}
-		rejected, ferr := s.store.Frames(ctx, st.Name, queue.FrameRejected, troubles)
+// attention lists the frames and shots that wait for a person, most recent
+// first; the page itself adds folders and bundles that are amiss.
+func (s *source) attention(ctx context.Context) (out []web.Attention, more int, err error) {
+	for i := range s.config.Station {
+		name := s.config.Station[i].Name
+		rejected, ferr := s.store.Frames(ctx, name, queue.FrameRejected, troubles)
 		err = errors.Join(err, ferr)
 		for _, f := range rejected {
 			if time.Since(f.Seen) < attentive {
-				out = append(out, web.Attention{Station: st.Name, Name: f.Path, State: "rejected", Since: f.Seen, Text: f.Reason, Remedy: "see the file itself"})
+				out = append(out, web.Attention{Station: name, Name: f.Path, State: "rejected", Since: f.Seen, Text: f.Reason, Remedy: "mend the file or its name; it is taken up again by itself"})
 			}
 		}
 	}
@@ -260,186 +248,4 @@ func parseCursor(text string) (*queue.Cursor, error) {
 		t = -t
 	}
 	return &queue.Cursor{Taken: time.Unix(0, t).UTC(), ID: n}, nil
-}
-
-// Shot returns everything about a shot.
-func (s *source) Shot(ctx context.Context, id int64) (web.ShotDetail, error) {
-	sh, attempts, err := s.store.Shot(ctx, id)
-	if errors.Is(err, queue.ErrNotFound) {
-		return web.ShotDetail{}, web.ErrNotFound
-	}
-	if err != nil {
-		return web.ShotDetail{}, err
-	}
-	d := web.ShotDetail{Shot: listedShot(sh), Gap: sh.Gap, Bundle: sh.ShownBundle, Folder: sh.ResultDir}
-	for _, a := range attempts {
-		w := web.Attempt{Number: a.Number, Pass: string(a.Pass), Host: a.Host, Start: a.Started, Err: a.Error}
-		if !a.Ended.IsZero() {
-			w.Took = max(a.Ended.Sub(a.Started), 1)
-		}
-		d.Attempts = append(d.Attempts, w)
-	}
-	d.Frames = s.frames(sh)
-	s.results(sh, &d)
-	return d, nil
-}
-
-func (s *source) frames(sh queue.Shot) (out []web.Frame) {
-	p, ok := s.worker.places[sh.Station]
-	if !ok {
-		return nil
-	}
-	add := func(arm, rel, path string, t time.Time) {
-		if rel == "" {
-			return
-		}
-		f := web.Frame{Arm: arm, Path: path, Time: t}
-		if st, err := os.Stat(path); err == nil {
-			f.Size = st.Size()
-		}
-		out = append(out, f)
-	}
-	add("streak", sh.StreakPath, p.streakFile(sh.StreakPath), sh.Taken)
-	add("reference", sh.ReferencePath, p.referenceFile(sh.ReferencePath), sh.Taken.Add(sh.Gap))
-	return out
-}
-
-// results reads the numbers and the files of a result folder.
-func (s *source) results(sh queue.Shot, d *web.ShotDetail) {
-	if sh.ResultDir == "" {
-		return
-	}
-	var m struct {
-		Bundle     string                      `json:"bundle"`
-		Quantities map[string]measure.Quantity `json:"quantities"`
-		Verdict    measure.Verdict             `json:"verdict"`
-	}
-	if raw, err := readFile(sh.ResultDir, "metrics.json"); err == nil && json.Unmarshal(raw, &m) == nil {
-		names := make([]string, 0, len(m.Quantities))
-		for n := range m.Quantities {
-			names = append(names, n)
-		}
-		slices.Sort(names)
-		for _, n := range names {
-			d.Quantities = append(d.Quantities, shownQuantity(n, m.Quantities[n]))
-		}
-		for _, r := range m.Verdict.Reasons {
-			d.Reasons = append(d.Reasons, web.Reason{Code: r.Code, Text: r.Text, Remedy: r.Remedy})
-		}
-	}
-	entries, err := os.ReadDir(sh.ResultDir)
-	if err != nil {
-		return
-	}
-	for _, e := range entries {
-		if st, err := e.Info(); err == nil && st.Mode().IsRegular() {
-			d.Files = append(d.Files, web.Info{Name: e.Name(), Size: st.Size(), ModTime: st.ModTime()})
-		}
-	}
-}
-
-// metricsBytes bounds the metrics.json that the page reads.
-const metricsBytes = 16 << 20
-
-// readFile reads a small file of a result folder without leaving it.
-func readFile(dir, name string) ([]byte, error) {
-	root, err := os.OpenRoot(dir)
-	if err != nil {
-		return nil, err
-	}
-	defer root.Close()
-	f, err := root.Open(name)
-	if err != nil {
-		return nil, err
-	}
-	defer f.Close()
-	return io.ReadAll(io.LimitReader(f, metricsBytes))
-}
-
-// Open opens a result file of a shot.
-func (s *source) Open(ctx context.Context, shot int64, name string) (io.ReadSeekCloser, web.Info, error) {
-	sh, _, err := s.store.Shot(ctx, shot)
-	if errors.Is(err, queue.ErrNotFound) || err == nil && sh.ResultDir == "" {
-		return nil, web.Info{}, web.ErrNotFound
-	}
-	if err != nil {
-		return nil, web.Info{}, err
-	}
-	root, err := os.OpenRoot(sh.ResultDir)
-	if err != nil {
-		return nil, web.Info{}, web.ErrNotFound
-	}
-	defer root.Close()
-	f, err := root.Open(name)
-	if err != nil {
-		return nil, web.Info{}, web.ErrNotFound
-	}
-	st, err := f.Stat()
-	if err != nil || !st.Mode().IsRegular() {
-		f.Close()
-		return nil, web.Info{}, web.ErrNotFound
-	}
-	return f, web.Info{Name: name, Size: st.Size(), ModTime: st.ModTime()}, nil
-}
-
-// Changed tells the page that something changed.
-func (s *source) Changed() <-chan struct{} { return s.changes }
-
-// Ready returns the checks that decide whether work gets done.
-func (s *source) Ready(ctx context.Context) []web.Check {
-	var out []web.Check
-	add := func(name string, err error) {
-		c := web.Check{Name: name, OK: err == nil}
-		if err != nil {
-			c.Detail = err.Error()
-		}
-		out = append(out, c)
-	}
-	_, err := s.store.Counts(ctx, "")
-	add("ledger", err)
-	err = nil
-	if !s.working.Load() {
-		err = errors.New("no job is started: the service is starting or stopping")
-	}
-	add("workers", err)
-	for i, in := range s.intakes {
-		c := &s.config.Station[i]
-		for j := range in.arms {
-			w := in.arms[j].watcher.State()
-			err = nil
-			if w.Condition != watch.OK {
-				err = fmt.Errorf("%s is %s: %v", w.Folder, w.Condition, w.Err)
-			}
-			add("folder "+c.Name+" "+string(in.arms[j].name), err)
-		}
-		_, err = s.bundles.at(c.Bundle, time.Now())
-		add("bundle "+c.Name, err)
-		add("disk "+c.Name, s.worker.room(s.worker.places[c.Name]))
-	}
-	return out
-}
-
-// heartbeat is how often the main loop shows that it turns.
-const heartbeat = time.Second
-
-// Alive reports a main loop that has stopped turning.
-func (s *source) Alive(context.Context) error {
-	if d := time.Since(time.Unix(0, s.beat.Load())); d > 10*heartbeat {
-		return fmt.Errorf("the main loop has not turned for %v", d.Round(time.Second))
-	}
-	return nil
-}
-
-// pulse keeps the heart beating until ctx ends.
-func (s *source) pulse(ctx context.Context) error {
-	t := time.NewTicker(heartbeat)
-	defer t.Stop()
-	for {
-		s.beat.Store(time.Now().UnixNano())
-		select {
-		case <-ctx.Done():
-			return nil
-		case <-t.C:
-		}
-	}
 }
