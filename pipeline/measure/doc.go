@@ -41,7 +41,8 @@
 // # Verdict
 //
 // good: no reason. doubtful: at least one limit is passed. unusable: a limit is
-// passed so far that the numbers must not be used. Each reason carries the
+// passed so far that the numbers must not be used. A quick look is judged by its
+// light, its saturation and the agreement of the arms alone. Each reason carries the
 // value, the limit and the remedy in plain words.
 //
 // Cost: one pass over the cube, no allocation that grows with it beyond two

@@ -52,6 +52,11 @@ type Input struct {
 	Fit    Fit
 	Limits Limits
 
+	// Quick says that the cube is a quick look: coarse pixels do not explain
+	// the frames to within their noise and it stops before it has settled, so
+	// neither counts against the shot.
+	Quick bool
+
 	// Extra holds reasons found elsewhere (pairing, bundle); each makes the
 	// shot doubtful.
 	Extra []Reason

@@ -192,6 +192,8 @@ func TestVerdict(t *testing.T) {
 		{"misfit reference", func(in *Input) { in.Reference.Misfit = 9 }, Unusable, "misfit_reference"},
 		{"late", func(in *Input) { in.OutsideSpan = 0.2 }, Doubtful, "outside_span"},
 		{"limit", func(in *Input) { in.Fit.Converged = false }, Doubtful, "not_converged"},
+		{"quick look", func(in *Input) { in.Quick, in.Streak.Misfit, in.Fit.Converged, in.OutsideSpan = true, 9, false, 0.4 }, Good, ""},
+		{"quick look, saturated", func(in *Input) { in.Quick, in.Streak.SaturatedShare = true, 0.031 }, Doubtful, "saturated_streak"},
 		{"extra", func(in *Input) { in.Extra = []Reason{{Code: "weak_stamp"}} }, Doubtful, "weak_stamp"},
 	}
 	for _, tc := range cases {

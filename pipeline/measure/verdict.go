@@ -154,6 +154,9 @@ func (in *Input) fit(j *judge, l Limits) {
 			j.v.Reasons[len(j.v.Reasons)-1].Value = abs(d)
 		}
 	}
+	if in.Quick {
+		return
+	}
 	for _, a := range []*Arm{&in.Streak, &in.Reference} {
 		j.above(a.Misfit, l.Misfit, Reason{Code: "misfit_" + a.Name, Unit: "1",
 			Text:   fmt.Sprintf("the cube explains the %s frame badly (reduced chi-square %.3g)", a.Name, a.Misfit),

@@ -75,6 +75,12 @@ type Options struct {
 	// MaxIter iterations.
 	Tol float64
 
+	// Spacing, if not zero, fixes the knots of Auto's splines along time, y
+	// and x, so that nothing is searched for: the weight of total variation
+	// is the weak one, and the answer is never the voxels' own. For a quick
+	// look.
+	Spacing [3]float64
+
 	// Workers is the number of goroutines. Default 1. It changes no bit of
 	// the result.
 	Workers int

@@ -50,6 +50,9 @@ type trial struct {
 
 // search chooses spacing and weight and solves with them.
 func (a *auto) search(ctx context.Context) loop {
+	if a.o.Spacing != [3]float64{} {
+		return a.fixed(ctx)
+	}
 	rough := a.o
 	rough.MaxIter, rough.Tol = min(trialIter, a.o.MaxIter), roughTol*a.o.Tol
 	a.at = a.c.sieve(rungs[3].spacing())
@@ -82,6 +85,22 @@ func (a *auto) search(ctx context.Context) loop {
 	if chi > misfit {
 		a.res.Notes = append(a.res.Notes, fmt.Sprintf("χ² per pixel is %.2f: the model does not describe the frames to within their noise", chi))
 	}
+	return a.at
+}
+
+// fixed solves with the spacing that was asked for.
+func (a *auto) fixed(ctx context.Context) loop {
+	rough := a.o
+	rough.MaxIter, rough.Tol = min(trialIter, a.o.MaxIter)/2, roughTol*a.o.Tol
+	a.at = a.c.sieve(a.o.Spacing)
+	a.at.begin(nil)
+	if a.p.StreakNoise != nil || a.p.ReferenceNoise != nil {
+		if !a.run(ctx, weak, rough) {
+			return a.at
+		}
+		a.reweigh()
+	}
+	a.run(ctx, weak, a.o)
 	return a.at
 }
 
