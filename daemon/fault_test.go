@@ -34,11 +34,15 @@ func TestFaultBadFiles(t *testing.T) {
 		recs[3].Streak: {func([]byte) []byte { return []byte("shot 4 was a good one\n") }, "not a readable frame"},
 		recs[4].Streak: {func([]byte) []byte { return nil }, "empty"},
 	}
+	var good []byte // the frame that becomes a text file
 	for name, b := range bad {
 		p := l.path("streak", name)
 		g, err := os.ReadFile(p)
 		if err != nil {
 			t.Fatal(err)
+		}
+		if name == recs[3].Streak {
+			good = g
 		}
 		if err := os.WriteFile(p, b.spoil(g), 0o644); err != nil {
 			t.Fatal(err)
@@ -69,6 +73,18 @@ func TestFaultBadFiles(t *testing.T) {
 			t.Errorf("%s is done and shows the %s pass", sh.Name, sh.ShownPass)
 		}
 	}
+	// A file that is written anew is taken up again.
+	if err := os.WriteFile(l.path("streak", recs[3].Streak), good, 0o644); err != nil {
+		t.Fatal(err)
+	}
+	await(t, 60*time.Second, "the shot of the mended file done", func() bool {
+		for _, sh := range l.shots(t) {
+			if sh.StreakPath == recs[3].Streak {
+				return sh.State == queue.StateDone && sh.Verdict != ""
+			}
+		}
+		return false
+	})
 	if code, body := get(t, page+"readyz?verbose"); code != 200 {
 		t.Errorf("readyz = %d after bad files:\n%s", code, body)
 	}

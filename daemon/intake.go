@@ -203,10 +203,8 @@ func (in *intake) commit(ctx context.Context, batch []queue.Frame) (time.Duratio
 		if err != nil {
 			return 0, err
 		}
-		for i, a := range added {
-			if a.Change == queue.FrameStale {
-				in.logger.Warn("a frame was replaced after its shot had run", zap.String("file", batch[i].Path), zap.Int64("shot", a.ShotID))
-			}
+		if err := in.replaced(ctx, batch, added); err != nil {
+			return 0, err
 		}
 	}
 	now := time.Now()
@@ -227,6 +225,31 @@ func (in *intake) commit(ctx context.Context, batch []queue.Frame) (time.Duratio
 		in.logger.Warn("pairing refused", zap.Int64("frame", r.Frame), zap.String("reason", r.Reason))
 	}
 	return wait(res.NextLook, now), nil
+}
+
+// replaced looks at frames that changed after a shot was made from them: a shot
+// that had been given up is tried again with the new file, any other keeps its
+// result and is marked.
+func (in *intake) replaced(ctx context.Context, batch []queue.Frame, added []queue.Added) error {
+	var again []int64
+	for i, a := range added {
+		if a.Change != queue.FrameStale {
+			continue
+		}
+		in.logger.Warn("a frame was replaced after its shot had run", zap.String("file", batch[i].Path), zap.Int64("shot", a.ShotID))
+		sh, _, err := in.store.Shot(ctx, a.ShotID)
+		if err != nil {
+			return err
+		}
+		if sh.State == queue.StateQuarantined {
+			again = append(again, a.ShotID)
+		}
+	}
+	if len(again) == 0 {
+		return nil
+	}
+	_, err := in.store.Retry(ctx, again, "")
+	return err
 }
 
 func wait(next, now time.Time) time.Duration {
