@@ -10,6 +10,7 @@ import (
 	"go.uber.org/zap"
 
 	"unsheard/config"
+	"unsheard/pipeline"
 )
 
 // Options of a Daemon.
@@ -28,7 +29,7 @@ type Options struct {
 	// Default: the running program.
 	Executable string
 
-	// Version is shown on the page. Default "development".
+	// Version is shown on the page. Default pipeline.Version.
 	Version string
 
 	// Started is called once with the page's address, when everything
@@ -52,6 +53,9 @@ func (o Options) fill() (Options, error) {
 			return o, err
 		}
 		o.Executable = exe
+	}
+	if o.Version == "" {
+		o.Version = pipeline.Version
 	}
 	if o.Started == nil {
 		o.Started = func(string) {}

@@ -19,7 +19,7 @@ type plane struct {
 	slope      []float32 // variance per photoelectron
 	vari       []float32 // readVar + slope·max(pe, 0)
 	lit        int
-	saturated  int // fine pixels of the whole frame
+	saturated  float64 // saturated over lit pixels of the whole frame
 }
 
 // correct turns a raw frame into photoelectrons and checks that it fits.
@@ -49,7 +49,7 @@ func (s *station) reference(c *calib.Corrected) *plane {
 
 func cut(c *calib.Corrected, x0, y0, cols, rows, n int) *plane {
 	px := cols * rows
-	p := &plane{x: x0, y: y0, w: cols, h: rows, saturated: c.Saturated,
+	p := &plane{x: x0, y: y0, w: cols, h: rows, saturated: c.SaturatedShare,
 		pe: make([]float32, px), readVar: make([]float32, px), slope: make([]float32, px), vari: make([]float32, px)}
 	optics.Bin(p.pe, p.readVar, c.PE, c.ReadVar, c.W, x0, y0, n, cols)
 	optics.Bin(p.slope, p.vari, c.Slope, c.ReadVar, c.W, x0, y0, n, cols)
@@ -72,8 +72,8 @@ func cut(c *calib.Corrected, x0, y0, cols, rows, n int) *plane {
 const litSigmas = 5
 
 // arm sums up what is known of a plane after the fit.
-func (p *plane) arm(name string, model []float32, misfit float64, n int) measure.Arm {
-	a := measure.Arm{Name: name, Lit: p.lit, Misfit: misfit}
+func (p *plane) arm(name string, model []float32, misfit float64) measure.Arm {
+	a := measure.Arm{Name: name, Lit: p.lit, SaturatedShare: p.saturated, Misfit: misfit}
 	var light, vari float64
 	for j, v := range p.vari {
 		if !(v > 0) {
@@ -85,9 +85,6 @@ func (p *plane) arm(name string, model []float32, misfit float64, n int) measure
 		vari += float64(v)
 	}
 	a.Light, a.LightSigma = light, math.Sqrt(vari)
-	if lit := p.lit*n*n + p.saturated; lit > 0 {
-		a.SaturatedShare = float64(p.saturated) / float64(lit)
-	}
 	return a
 }
 

@@ -42,7 +42,6 @@ type Provenance struct {
 
 	Streak       Source `json:"streak"`
 	Reference    Source `json:"reference"`
-	Bundle       string `json:"bundle"`
 	BundleID     string `json:"bundle_id"`
 	BundleFolder string `json:"bundle_folder"`
 

@@ -79,7 +79,7 @@ func (s *shot) load(context.Context) (string, error) {
 		return "", err
 	}
 	s.bundle = b
-	s.prov.BundleID, s.prov.BundleFolder, s.prov.Bundle = b.ID, s.job.Bundle, b.Station
+	s.prov.BundleID, s.prov.BundleFolder = b.ID, s.job.Bundle
 	s.station, err = newStation(b, s.job.Coarse, true)
 	return fmt.Sprintf("bundle %.12s", b.ID), err
 }
@@ -195,8 +195,8 @@ func (s *shot) measure(context.Context) (string, error) {
 		GuardFrames: s.station.lead, OutsideShare: outside}
 	light, sigma := s.station.expected(s.refFrame)
 	in := measure.Input{Cube: c,
-		Streak:    s.streak.arm("streak", r.StreakModel, r.Chi2Streak, s.job.Coarse),
-		Reference: s.ref.arm("reference", r.ReferenceModel, r.Chi2Reference, s.job.Coarse),
+		Streak:    s.streak.arm("streak", r.StreakModel, r.Chi2Streak),
+		Reference: s.ref.arm("reference", r.ReferenceModel, r.Chi2Reference),
 		Expected:  light, ExpectedSigma: sigma, Transmission: s.transmission(),
 		ScaleSigma: s.bundle.Scale.Sigma, OutsideSpan: outside,
 		Fit:   measure.Fit{Converged: r.Status == solve.Converged, Iterations: r.Iterations, Lambda: r.Lambda, Alpha: r.Alpha},

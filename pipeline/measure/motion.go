@@ -47,7 +47,7 @@ func (in *Input) motion(r *Report) {
 	if v > 0 {
 		s = math.Hypot(vx/v*sx, vy/v*sy)
 	}
-	const how = "weighted straight line through the centroids; deviation from the scatter about it"
+	const how = "weighted straight line through the centroids of the bright frames; deviation from the scatter about it alone"
 	r.set("velocity_x", vx, sx, "px/ps", how)
 	r.set("velocity_y", vy, sy, "px/ps", how)
 	r.set("speed", v, s, "px/ps", how)
