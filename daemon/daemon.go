@@ -63,7 +63,7 @@ func (d *Daemon) wire(ctx context.Context, mem int64) error {
 	b := newBundles()
 	d.o.Registry.MustRegister(collectors.NewGoCollector(), collectors.NewProcessCollector(collectors.ProcessCollectorOpts{}))
 	d.worker = &worker{work: c.Work, keepFree: int64(c.Disk.KeepFree), places: map[string]place{}, folders: map[string]string{},
-		bundles: b, budget: newBudget(mem), turns: newTurns(), child: child{d.o.Executable, d.o.Logger}, logger: d.o.Logger,
+		bundles: b, budget: newBudget(mem), turns: newTurns(), trouble: newTrouble(d.o.Logger), child: child{d.o.Executable, d.o.Logger}, logger: d.o.Logger,
 		metrics: newMetrics(d.o.Registry, d.o.Version, d.slots, mem)}
 	d.worker.waiting = d.waiting
 	d.source = &source{config: c, store: d.store, bundles: b, worker: d.worker, slots: d.slots}

@@ -1,6 +1,7 @@
 package daemon
 
 import (
+	"cmp"
 	"context"
 	"encoding/json"
 	"errors"
@@ -23,7 +24,7 @@ func (s *source) Shot(ctx context.Context, id int64) (web.ShotDetail, error) {
 	if err != nil {
 		return web.ShotDetail{}, err
 	}
-	d := web.ShotDetail{Shot: listedShot(sh), Gap: sh.Gap, Bundle: sh.ShownBundle, Folder: sh.ResultDir}
+	d := web.ShotDetail{Shot: listedShot(sh), Gap: sh.Gap, Bundle: cmp.Or(sh.ShownBundle, readSummary(sh.Summary).Bundle), Folder: sh.ResultDir}
 	for _, a := range attempts {
 		w := web.Attempt{Number: a.Number, Pass: string(a.Pass), Host: a.Host, Start: a.Started, Err: a.Error}
 		if !a.Ended.IsZero() {

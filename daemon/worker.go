@@ -27,6 +27,7 @@ type worker struct {
 	bundles  *bundles
 	budget   *budget
 	turns    *turns
+	trouble  *trouble
 	child    child
 	logger   *zap.Logger
 	running  atomic.Int64
@@ -48,11 +49,14 @@ func (w *worker) Do(ctx context.Context, t queue.Task) (queue.Outcome, error) {
 		return queue.Outcome{}, queue.Later(fmt.Errorf("station %q is not in the configuration any more: add it again, or give the shot up", t.Station), pauseBundle)
 	}
 	b, err := w.bundle(t)
+	w.trouble.note(t.Station, "bundle", err)
 	if err != nil {
 		return queue.Outcome{}, queue.Later(err, pauseBundle)
 	}
 	out := p.result(t.StreakPath, t.ReferencePath)
-	if err := w.room(p); err != nil {
+	err = w.room(p)
+	w.trouble.note(t.Station, "place", err)
+	if err != nil {
 		return queue.Outcome{}, queue.Later(err, pausePlace)
 	}
 	coarse := 1
@@ -84,8 +88,12 @@ func (w *worker) Do(ctx context.Context, t queue.Task) (queue.Outcome, error) {
 		return queue.Outcome{}, fmt.Errorf("shot %s: %w", t.Name, err)
 	}
 	if a.Error != "" {
+		if a.Place {
+			w.trouble.note(t.Station, "publishing", errors.New(a.Error))
+		}
 		return queue.Outcome{}, w.fault(a)
 	}
+	w.trouble.note(t.Station, "publishing", nil)
 	if t.Pass == queue.Full {
 		w.perShot.Store(int64(time.Since(began)))
 	}
